@@ -1,0 +1,232 @@
+"""Exact zero-order-hold sampling: triangular state matrices in, pulse-transfer polynomials for loop out.
+
+A lower triangular state matrix keeps the eigenvalues on its diagonal, so that every polynomial is built from
+known roots w_i = exp(λ_i T) - 1 and from divided differences of the exponential. For real stable poles no
+subtraction occurs at all; nothing is expanded in z and shifted afterwards.
+
+Sources: McCurdy, Ng and Parlett (1984), Math. Comp. 43, 501-528 (divided differences of the exponential by
+scaling and squaring with exact diagonals); Åström and Wittenmark, Computer-Controlled Systems, 3rd ed., §2.3
+(sampling with dead time).
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+import explorer.kernels  # the cache folder is chosen there
+
+assert explorer.kernels  # noqa: S101
+
+_WHOLE = 1e-12  # dead times this close to a whole number of samples are that number
+_TERMS = 20  # Taylor terms for a norm of at most 1/2: the remainder is below 0.5**20/20! = 4e-25
+
+
+def _kernel(function: Any) -> Any:
+    return numba.njit(cache=True, nogil=True, error_model="numpy")(function)
+
+
+@_kernel
+def _exponential_minus_one(x: complex) -> complex:
+    """exp(x) - 1 without cancellation."""
+    half = math.sin(0.5 * x.imag)
+    grown = math.exp(x.real)
+    return complex(math.expm1(x.real) * math.cos(x.imag) - 2.0 * half * half, grown * math.sin(x.imag))
+
+
+@_kernel
+def _exponential(x: complex) -> complex:
+    grown = math.exp(x.real)
+    return complex(grown * math.cos(x.imag), grown * math.sin(x.imag))
+
+
+@_kernel
+def _divided_difference(x: complex, y: complex) -> complex:
+    """exp[x, y] = (exp x - exp y)/(x - y), from the side that cannot overflow."""
+    if x == y:
+        return _exponential(x)
+    if x.real > y.real:
+        return _exponential(x) * _exponential_minus_one(y - x) / (y - x)
+    return _exponential(y) * _exponential_minus_one(x - y) / (x - y)
+
+
+@_kernel
+def exponential_of_triangle(matrix: NDArray[Any], time: float, result: NDArray[Any], spare: NDArray[Any]) -> None:
+    """result = exp(matrix * time) for a lower triangular complex matrix (n, n); spare is overwritten.
+
+    Scaling and squaring with the diagonal and the first subdiagonal put in exactly after every squaring.
+    """
+    size = matrix.shape[0]
+    norm = 0.0
+    for i in range(size):
+        row = 0.0
+        for j in range(i + 1):
+            row += abs(matrix[i, j])
+        norm = max(norm, row * abs(time))
+    squarings = 0
+    while norm > 0.5 and squarings < 1100:
+        norm *= 0.5
+        squarings += 1
+    scaled = time / 2.0**squarings
+    for i in range(size):  # Taylor by Horner: result = I + X(I + X/2(I + X/3(...)))
+        for j in range(size):
+            result[i, j] = 1.0 if i == j else 0.0
+    for term in range(_TERMS, 0, -1):
+        _multiply_triangles(matrix, result, scaled / term, spare)
+        for i in range(size):
+            for j in range(i + 1):
+                result[i, j] = spare[i, j] + (1.0 if i == j else 0.0)
+    _put_exact(matrix, scaled, result)
+    for squaring in range(squarings):
+        _multiply_triangles(result, result, 1.0, spare)
+        for i in range(size):
+            for j in range(i + 1):
+                result[i, j] = spare[i, j]
+        _put_exact(matrix, time / 2.0 ** (squarings - 1 - squaring), result)
+
+
+@_kernel
+def _multiply_triangles(left: NDArray[Any], right: NDArray[Any], factor: float, product: NDArray[Any]) -> None:
+    for i in range(left.shape[0]):
+        for j in range(i + 1):
+            total = 0.0 + 0.0j
+            for k in range(j, i + 1):
+                total += left[i, k] * right[k, j]
+            product[i, j] = total * factor
+
+
+@_kernel
+def _put_exact(matrix: NDArray[Any], time: float, result: NDArray[Any]) -> None:
+    for i in range(matrix.shape[0]):
+        result[i, i] = _exponential(matrix[i, i] * time)
+        if i > 0:
+            difference = _divided_difference(matrix[i, i] * time, matrix[i - 1, i - 1] * time)
+            result[i, i - 1] = matrix[i, i - 1] * time * difference
+
+
+@_kernel
+def _add_response(
+    step: NDArray[Any],
+    roots: NDArray[Any],
+    start: NDArray[Any],
+    output: NDArray[Any],
+    shift: int,
+    slope: float,
+    total: NDArray[Any],
+    running: NDArray[Any],
+    product: NDArray[Any],
+) -> None:
+    """Add output (x I - M)^-1 start * Π(x - roots) to `total` (ascending powers), times (slope + x) if shift.
+
+    M has the roots on its diagonal and the off-diagonals of `step`. Row k of the solution has the denominator
+    Π_{i<=k}(x - roots_i); `running[j]` is row j brought to the denominator reached so far.
+    """
+    n = roots.shape[0]
+    product[:] = 0.0
+    product[0] = 1.0
+    for k in range(n):
+        for power in range(n):
+            value = start[k] * product[power]
+            for j in range(k):
+                value += step[k, j] * running[j, power]
+            running[k, power] = value
+        for j in range(k):
+            _times_root(running[j], roots[k], n)
+        _times_root(product, roots[k], n + 1)
+    for power in range(n):
+        value = 0.0
+        for k in range(n):
+            value += (output[k] * running[k, power]).real
+        if shift:
+            total[power] += slope * value
+            total[power + 1] += value
+        else:
+            total[power] += value
+
+
+@_kernel
+def _times_root(polynomial: NDArray[Any], root: complex, length: int) -> None:
+    """polynomial *= (x - root), ascending powers, the top coefficient known to be free."""
+    for power in range(length - 1, 0, -1):
+        polynomial[power] = polynomial[power - 1] - root * polynomial[power]
+    polynomial[0] = -root * polynomial[0]
+
+
+@_kernel
+def sample_with_hold(
+    state: NDArray[Any],
+    start: NDArray[Any],
+    output: NDArray[Any],
+    direct: NDArray[Any],
+    period: NDArray[Any],
+    dead_time: NDArray[Any],
+    numerator: NDArray[Any],
+    denominator: NDArray[Any],
+    whole: NDArray[Any],
+) -> None:
+    """Pulse-transfer polynomials of every (scenario, period).
+
+    Parameters
+    ----------
+    state : (S, n, n) complex lower triangular [1/s]; start (input) : (S, n); output : (S, n); direct : (S,).
+    period : (S, P) [s], true sample periods; dead_time : (S, P) [s], total from sample taken to plant output.
+    numerator, denominator : (S, P, 2, n+1) out, descending powers; index 0 in w = z - 1, index 1 in z.
+        The transfer is numerator / (denominator * z**whole). Infinite or NaN where it overflows.
+    whole : (S, P) int64 out, whole samples of delay.
+
+    With direct feedthrough and a dead time of exactly `whole` periods, the sample sees u[k - whole].
+    """
+    scenarios, n = start.shape
+    augmented = np.zeros((n + 1, n + 1), np.complex128)
+    full, part, rest = np.empty_like(augmented), np.empty_like(augmented), np.empty_like(augmented)
+    spare, running = np.empty_like(augmented), np.empty((n, n + 1), np.complex128)
+    product, roots = np.empty(n + 1, np.complex128), np.empty(n, np.complex128)
+    early, late = np.empty(n, np.complex128), np.empty(n, np.complex128)
+    below, above = np.empty(n + 1, np.complex128), np.empty(n + 2)
+    for scenario in range(scenarios):
+        augmented[1:, 0] = start[scenario]
+        augmented[1:, 1:] = state[scenario]
+        for column in range(period.shape[1]):
+            time, delay = period[scenario, column], dead_time[scenario, column]
+            samples = delay / time
+            count = round(samples)
+            if abs(samples - count) > _WHOLE * max(1.0, samples):
+                count = math.ceil(samples)
+                advance = min(count * time - delay, time)
+            else:
+                advance = 0.0
+            whole[scenario, column] = int(count)
+            exponential_of_triangle(augmented, time, full, spare)
+            late[:] = 0.0
+            if advance > 0.0:
+                exponential_of_triangle(augmented, advance, part, spare)
+                exponential_of_triangle(augmented, time - advance, rest, spare)
+                late[:] = part[1:, 0]
+                for i in range(n):
+                    early[i] = 0.0
+                    for j in range(i + 1):
+                        early[i] += part[i + 1, j + 1] * rest[j + 1, 0]
+            else:
+                early[:] = full[1:, 0]
+            for variable in range(2):
+                for i in range(n):
+                    exponent = state[scenario, i, i] * time
+                    roots[i] = _exponential_minus_one(exponent) if variable == 0 else _exponential(exponent)
+                below[:] = 0.0
+                below[0] = 1.0
+                for i in range(n):
+                    _times_root(below, roots[i], n + 1)
+                above[:] = 0.0
+                step = full[1:, 1:]
+                slope = 1.0 if variable == 0 else 0.0  # z = 1 + w
+                _add_response(step, roots, early, output[scenario], 0, slope, above, running, product)
+                if advance > 0.0:
+                    _add_response(step, roots, late, output[scenario], 1, slope, above, running, product)
+                for power in range(n + 1):
+                    value = above[power] + direct[scenario] * below[power].real
+                    numerator[scenario, column, variable, n - power] = value
+                    denominator[scenario, column, variable, n - power] = below[power].real

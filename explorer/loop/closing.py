@@ -1,0 +1,111 @@
+"""Closing the loop: a sampled plant and a compensator in, characteristic polynomials for kernels.roots out.
+
+The coefficients are formed here and nowhere else: a(w)·(1 + w)^d·c(w) + b(w)·e(w) for the plant b/(a z^d) and
+the compensator e/c, as a function of gain, period and parameters.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from explorer.kernels.roots import HIGHEST_DEGREE, TOO_LONG, Poles, poles
+from explorer.loop.compensator import Compensator
+
+Real = NDArray[np.float64]
+
+
+class Sampled(NamedTuple):
+    """The plant between hold and sampler for S scenarios and P periods.
+
+    numerator, denominator : (S, P, 2, n+1), descending; index 0 in w, 1 in z. whole : (S, P) delay in samples.
+    period : (S, P) true sample periods [s].
+    """
+
+    numerator: Real
+    denominator: Real
+    whole: NDArray[np.int64]
+    period: Real
+
+
+class Group(NamedTuple):
+    """The poles of those (scenario, period) pairs that share one whole-sample delay, so one degree.
+
+    rows, columns : (M,) indices of scenario and period; found : Poles with log_z (M, G, degree).
+    """
+
+    rows: NDArray[np.intp]
+    columns: NDArray[np.intp]
+    found: Poles
+
+
+def closed_loop_poles(sampled: Sampled, compensator: Compensator, gain: Real) -> Iterator[Group]:
+    """All closed-loop poles at every (scenario, period, gain), one group per whole-sample delay."""
+    for delay in np.unique(sampled.whole):
+        rows, columns = np.nonzero(sampled.whole == delay)
+        if sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay > HIGHEST_DEGREE:
+            shape = (len(rows), len(gain))
+            unknown = Poles(np.full((*shape, 1), np.nan + 0j), np.full(shape, TOO_LONG, np.int8))
+            yield Group(rows, columns, unknown)
+            continue
+        in_w, in_z = (
+            _at_gains(*characteristic(sampled, compensator, rows, columns, int(delay), variable), gain)
+            for variable in (0, 1)
+        )
+        yield Group(rows, columns, poles(in_w, in_z))
+
+
+def characteristic(
+    sampled: Sampled,
+    compensator: Compensator,
+    rows: NDArray[np.intp],
+    columns: NDArray[np.intp],
+    delay: int,
+    variable: int,
+) -> tuple[Real, Real]:
+    """The polynomial constant + gain * slope of selected (scenario, period) pairs with `delay` whole samples.
+
+    variable : 0 in w, 1 in z. Both results are (M, K, n+1), descending powers: K = 1 when the compensator is
+    affine in the gain; otherwise K = gains and the slope is zero.
+    """
+    below = sampled.denominator[rows, columns, variable][:, None]
+    above = sampled.numerator[rows, columns, variable][:, None]
+    under = np.moveaxis(compensator.denominator[variable][:, columns], 0, 1)
+    over = np.moveaxis(compensator.numerator[variable][:, columns], 0, 1)
+    open_loop = _product(_product(below, power_of_z(delay, variable)), under)
+    if not compensator.affine:
+        constant = _sum(open_loop, _product(above, over))
+        return constant, np.zeros_like(constant)
+    return _sum(open_loop, _product(above, over[:, :1])), _sum(0 * open_loop, _product(above, over[:, 1:]))
+
+
+def power_of_z(delay: int, variable: int) -> Real:
+    """z**delay, descending powers of w (variable 0: binomials, all positive) or of z (variable 1)."""
+    if variable == 0:
+        return np.array([math.comb(delay, k) for k in range(delay + 1)], float)
+    return np.array([1.0] + [0.0] * delay)
+
+
+def _at_gains(constant: Real, slope: Real, gain: Real) -> Real:
+    """(M, G, n+1)."""
+    return constant + gain[None, :, None] * slope
+
+
+def _product(left: Real, right: Real) -> Real:
+    """Polynomial product along the last axis; the others broadcast."""
+    batch = np.broadcast_shapes(left.shape[:-1], right.shape[:-1])
+    result = np.zeros((*batch, left.shape[-1] + right.shape[-1] - 1))
+    for power in range(right.shape[-1]):
+        result[..., power : power + left.shape[-1]] += left * right[..., power : power + 1]
+    return result
+
+
+def _sum(larger: Real, smaller: Real) -> Real:
+    """Sum of two polynomials, the first of at least the second's degree."""
+    result = np.array(np.broadcast_to(larger, (*np.broadcast_shapes(larger.shape[:-1], smaller.shape[:-1]), larger.shape[-1])))
+    result[..., larger.shape[-1] - smaller.shape[-1] :] += smaller
+    return result

@@ -1,0 +1,125 @@
+"""[[requirements]] of a study: tables and the catalogue of measures in, Requirements out, faults collected."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Sequence
+from typing import Any
+
+from explorer.study.collect import Collector
+from explorer.study.expressions import closest
+from explorer.study.locate import Path
+from explorer.study.model import Measure, Requirement
+from explorer.study.schema import RequirementSection, shown
+
+_SAMPLES = re.compile(r"\s*(\S+)\s+samples?\s*")
+
+
+def read_requirements(
+    collector: Collector, tables: list[dict[str, Any]], catalogue: Sequence[Measure], time_unit: str
+) -> list[Requirement]:
+    """All requirements in the study's order; time_unit "sample" for a normalised plant."""
+    requirements: list[Requirement] = []
+    for index, table in enumerate(tables):
+        path: Path = ("requirements", index)
+        section = collector.section(RequirementSection, table, path)
+        found = _requirement(collector, section, path, catalogue, time_unit) if section else None
+        if found is None:
+            continue
+        if any(found.name == other.name for other in requirements):
+            place = (*path, "name") if section and section.name else path
+            collector.fault(place, f"the name {shown(found.name)} stands twice", "names are unique", "Add name = \"...\".")
+            continue
+        requirements.append(found)
+    return requirements
+
+
+def _requirement(
+    collector: Collector, section: RequirementSection, path: Path, catalogue: Sequence[Measure], time_unit: str
+) -> Requirement | None:
+    measure = _measure(collector, section, path, catalogue)
+    if measure is None:
+        return None
+    name = section.name or measure.name
+    if section.band is not None and measure.band is None:
+        collector.fault((*path, "band"), f"found with {measure.name}", "allowed: only with a settling time", "Remove it.")
+    band = _band(collector, section, measure, path)
+    if not measure.takes_limit:
+        for key in ("at_least", "at_most", "scale"):
+            if getattr(section, key) is not None:
+                collector.fault((*path, key), f"found with {measure.name}", "it takes no limit", "Remove it.")
+        return Requirement(name, measure, "below", math.nan, False, math.nan, band)
+    given = [key for key in ("at_least", "at_most") if getattr(section, key) is not None]
+    if len(given) != 1:
+        found = "found at_least and at_most" if given else "no limit"
+        collector.fault(path, found, f"{measure.name} needs at_least or at_most, one of them",
+                        "Write two requirements." if given else "")  # fmt: skip
+        return None
+    unit = unit_in(measure, time_unit)
+    limit = read_limit(collector, getattr(section, given[0]), (*path, given[0]), measure, time_unit)
+    scale: float | None = math.nan
+    if section.scale is not None:
+        scale = collector.in_unit(section.scale, (*path, "scale"), unit, lowest=0.0)
+        if scale == 0:
+            collector.fault((*path, "scale"), f"found {shown(section.scale)}", "allowed: more than 0")
+    if limit is None or scale is None:
+        return None
+    if limit[0] == 0 and math.isnan(scale):
+        collector.fault((*path, given[0]), "found a limit of 0", "its slack has no natural scale",
+                        f'Add scale = "... {unit}": the change that counts as 100 %.')  # fmt: skip
+        return None
+    return Requirement(name, measure, given[0].replace("_", " "), *limit, scale, band)
+
+
+def read_limit(
+    collector: Collector, value: str | int | float, path: Path, measure: Measure, time_unit: str
+) -> tuple[float, bool] | None:
+    """A limit in the measure's unit, and whether it counts samples (then the number is in samples)."""
+    counted = _SAMPLES.fullmatch(value) if isinstance(value, str) and len(value) < 80 else None
+    if counted and measure.in_samples and time_unit != "sample":
+        number = collector.in_unit(counted.group(1), path, "1", lowest=0.0)
+        return None if number is None else (number, True)
+    number = collector.in_unit(value, path, unit_in(measure, time_unit))
+    return None if number is None else (number, False)
+
+
+def unit_in(measure: Measure, time_unit: str) -> str:
+    """The measure's unit in this study: times count samples when the plant is normalised."""
+    if time_unit == "s":
+        return measure.unit
+    return {"s": "sample", "rad/s": "rad/sample"}.get(measure.unit, measure.unit)
+
+
+def _measure(
+    collector: Collector, section: RequirementSection, path: Path, catalogue: Sequence[Measure]
+) -> Measure | None:
+    named = [measure for measure in catalogue if measure.name == section.measure]
+    if not named:
+        names = list(dict.fromkeys(measure.name for measure in catalogue))
+        collector.fault((*path, "measure"), f"unknown measure {shown(section.measure)}",
+                        f"this version has: {', '.join(names)}", closest(section.measure, names))  # fmt: skip
+        return None
+    bases = [measure.basis for measure in named if measure.basis]
+    if not bases:
+        if section.basis is not None:
+            collector.fault((*path, "basis"), f"found with {section.measure}", "it has one reading only", "Remove it.")
+        return named[0]
+    if section.basis not in bases:
+        found = "no basis" if section.basis is None else f"found {shown(section.basis)}"
+        place = path if section.basis is None else (*path, "basis")
+        allowed = " or ".join(f'"{basis}"' for basis in bases)
+        collector.fault(place, found, f"{section.measure} in this version: basis = {allowed}")
+        return None
+    return next(measure for measure in named if measure.basis == section.basis)
+
+
+def _band(collector: Collector, section: RequirementSection, measure: Measure, path: Path) -> float:
+    if measure.band is None:
+        return math.nan
+    if section.band is None:
+        return measure.band
+    band = collector.in_unit(section.band, (*path, "band"), "1")
+    if band is not None and not 0 < band < 1:
+        collector.fault((*path, "band"), f"found {shown(section.band)}", 'allowed: between 0 and 100 %, such as "2 %"')
+    return band if band is not None else measure.band

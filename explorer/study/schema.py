@@ -1,0 +1,194 @@
+"""Schema: the parsed tables of a study in, typed sections or a list of structural problems out, for reading.
+
+Each section is validated on its own, so a misspelt key in one does not hide the faults of another.
+"""
+
+from __future__ import annotations
+
+from typing import Annotated, Any, TypeVar
+
+from pydantic import BaseModel, ConfigDict, Field, PlainValidator, ValidationError
+
+from explorer.study.expressions import closest
+
+Found = tuple[tuple[str | int, ...], str, str, str]  # path inside the section, found, allowed, mend
+
+
+def _scalar(value: Any) -> str | int | float:
+    if isinstance(value, bool) or not isinstance(value, str | int | float):
+        raise ValueError('a number or a text such as "12 ms"')
+    return value
+
+
+def _text(value: Any) -> str:
+    if not isinstance(value, str) or not value.strip():
+        raise ValueError("a text in quotes")
+    if len(value) > 200 or any(ord(letter) < 32 or ord(letter) == 127 for letter in value):
+        raise ValueError("one line of at most 200 printable characters")
+    return value
+
+
+def _whole(value: Any) -> int:
+    if isinstance(value, bool) or not isinstance(value, int) or value < 0:
+        raise ValueError("a whole number, 0 or more")
+    return value
+
+
+def _flag(value: Any) -> bool:
+    if not isinstance(value, bool):
+        raise ValueError("true or false")
+    return value
+
+
+def _scales(value: Any) -> tuple[float, ...]:
+    if not isinstance(value, list) or not 0 < len(value) <= 50:
+        raise ValueError("a list of 1 to 50 numbers such as [0, 0.5, 1.0]")
+    if any(isinstance(item, bool) or not isinstance(item, int | float) or not 0 <= item <= 100 for item in value):
+        raise ValueError("numbers from 0 to 100")
+    return tuple(sorted({float(item) for item in value}))
+
+
+def _scalars(value: Any) -> tuple[str | int | float, ...]:
+    if not isinstance(value, list) or not 0 < len(value) <= 100_000:
+        raise ValueError("a list of one or more values")
+    return tuple(_scalar(item) for item in value)
+
+
+def _rows(value: Any) -> tuple[tuple[str | int | float, ...], ...]:
+    allowed = "a matrix: a list of rows, each a list of at most 24 numbers or expressions, all of one length"
+    if not isinstance(value, list) or not 0 < len(value) <= 24:
+        raise ValueError(allowed)
+    rows = [row if isinstance(row, list) else [row] for row in value]
+    if len({len(row) for row in rows}) != 1 or not 0 < len(rows[0]) <= 24:
+        raise ValueError(allowed)
+    return tuple(tuple(_scalar(item) for item in row) for row in rows)
+
+
+def _table(value: Any) -> dict[str, Any]:
+    if not isinstance(value, dict):
+        raise ValueError("a table")
+    return value
+
+
+Scalar = Annotated[str | int | float, PlainValidator(_scalar)]
+Text = Annotated[str, PlainValidator(_text)]
+Whole = Annotated[int, PlainValidator(_whole)]
+Flag = Annotated[bool, PlainValidator(_flag)]
+Scales = Annotated[tuple[float, ...], PlainValidator(_scales)]
+Scalars = Annotated[tuple[str | int | float, ...], PlainValidator(_scalars)]
+Rows = Annotated[tuple[tuple[str | int | float, ...], ...], PlainValidator(_rows)]
+Table = Annotated[dict[str, Any], PlainValidator(_table)]
+
+
+class _Section(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True, populate_by_name=False)
+
+
+class StudySection(_Section):
+    """The top level."""
+
+    title: Text
+    plant: Table
+    loop: Table
+    sweep: Table
+    requirements: list[Table] = Field(min_length=1)
+
+
+class StatesSection(_Section):
+    """[plant] states."""
+
+    A: Rows
+    B: Rows
+    C: Rows
+    D: Rows | None = None
+
+
+class PlantSection(_Section):
+    """[plant]."""
+
+    transfer: Scalar | None = None
+    states: Table | None = None
+    dead_time: Scalar = 0
+    sampled_at: Scalar | None = None
+    parameters: Table = Field(default_factory=dict)
+
+
+class ParameterSection(_Section):
+    """One entry of [plant.parameters]."""
+
+    nominal: Scalar | None = None
+    tolerance: Scalar | None = None
+    from_: Scalar | None = Field(default=None, alias="from")
+    to: Scalar | None = None
+    any_of: Scalars | None = None
+
+
+class LoopSection(_Section):
+    """[loop]."""
+
+    compensator: Scalar
+    conversion: Text | None = None
+    computing_delay: Scalar = 0
+    sensor: Scalar = 1
+    clock_tolerance: Scalar = 0
+    execution_time: Scalar | None = None
+
+
+class AxisSection(_Section):
+    """One axis of [sweep]."""
+
+    from_: Scalar | None = Field(default=None, alias="from")
+    to: Scalar | None = None
+    points: Whole | None = None
+    spacing: Text | None = None
+    values: Scalars | None = None
+
+
+class ScenarioSection(_Section):
+    """[sweep] scenarios."""
+
+    interior: Whole = 64
+    corners: Flag = True
+    seed: Whole = 1
+    tolerance_scales: Scales = (0.0, 1.0)
+
+
+class RequirementSection(_Section):
+    """One [[requirements]]."""
+
+    measure: Text
+    name: Text | None = None
+    basis: Text | None = None
+    at_least: Scalar | None = None
+    at_most: Scalar | None = None
+    scale: Scalar | None = None
+    band: Scalar | None = None
+
+
+Section = TypeVar("Section", bound=BaseModel)
+
+
+def validated(model: type[Section], data: Any) -> tuple[Section | None, list[Found]]:
+    """The section, or None and everything that is wrong with its structure."""
+    try:
+        return model.model_validate(data), []
+    except ValidationError as error:
+        known = [field.alias or name for name, field in model.model_fields.items()]
+        return None, [_described(dict(item), known) for item in error.errors(include_url=False)]
+
+
+def _described(item: dict[str, Any], known: list[str]) -> Found:
+    path = tuple(part for part in item["loc"] if not (isinstance(part, str) and "[" in part))
+    if item["type"] == "extra_forbidden":
+        key = str(path[-1])
+        return path, f"unknown key {shown(key)}", f"allowed here: {', '.join(known)}", closest(key, known)
+    if item["type"] == "missing":
+        return path, "missing", f"{path[-1]} must be given", ""
+    allowed = item["msg"].removeprefix("Value error, ")
+    return path, f"found {shown(item['input'])}", f"allowed: {allowed}", ""
+
+
+def shown(value: Any) -> str:
+    """A value as its writer would recognise it, control characters escaped and at most 60 characters long."""
+    text = repr(value) if not isinstance(value, str) else ascii(value) if not value.isprintable() else f'"{value}"'
+    return text if len(text) <= 60 else text[:57] + "..."

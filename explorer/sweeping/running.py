@@ -1,0 +1,110 @@
+"""Running: a study in, its sweep Dataset out; tiles go through joblib and, given a folder, through the store."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable, Iterable
+from pathlib import Path
+
+import joblib
+import xarray
+
+import explorer
+from explorer.errors import OptionError
+from explorer.study.model import Study
+from explorer.sweeping.dataset import Grid
+from explorer.sweeping.scenarios import Scenarios, scenarios_of
+from explorer.sweeping.store import SWEEP_FILE, TileStore, owned, read_dataset, write_dataset
+from explorer.sweeping.tiles import Tile, TileResult, compute, tiles_of
+
+Progress = Callable[[int, int], None]  # tiles finished, tiles in all
+
+
+def sweep(
+    study: Study,
+    out: str | Path | None = None,
+    jobs: int = -1,
+    fresh: bool = False,
+    progress: Progress | None = None,
+) -> xarray.Dataset:
+    """Sweep a study over gain, period, further design variables and scenarios.
+
+    Parameters
+    ----------
+    out : folder for sweep.nc; a stopped run there is continued. None keeps everything in memory.
+    jobs : worker threads, -1 for one per core; the numbers do not depend on it.
+    fresh : start over although a run of this study is there.
+    progress : called after every tile.
+
+    Raises
+    ------
+    StudyError : an expression has no value somewhere on the axes; RunError : the folder cannot be used.
+    """
+    if jobs != -1 and jobs < 1:
+        raise OptionError(f"jobs: found {jobs}; allowed: 1 or more, or -1 for one per core")
+    scenarios = scenarios_of(study)
+    tiles = tiles_of(study, len(scenarios.scale))
+    if out is None:
+        return _in_memory(study, scenarios, tiles, jobs, progress)
+    folder = Path(out)
+    with owned(folder):
+        return _in_folder(study, scenarios, tiles, folder, jobs, fresh, progress)
+
+
+def run_key(study: Study) -> str:
+    """What two runs must share to share tiles: the study's text and the program's version."""
+    return hashlib.sha256(f"{study.sha256} {explorer.__version__}".encode()).hexdigest()[:16]
+
+
+def _in_memory(
+    study: Study, scenarios: Scenarios, tiles: list[Tile], jobs: int, progress: Progress | None
+) -> xarray.Dataset:
+    grid = Grid(study, scenarios)
+    for done, (tile, result) in enumerate(_computed(study, scenarios, tiles, jobs), 1):
+        grid.put(tile, result)
+        if progress:
+            progress(done, len(tiles))
+    return grid.dataset()
+
+
+def _in_folder(
+    study: Study, scenarios: Scenarios, tiles: list[Tile], folder: Path, jobs: int, fresh: bool, progress: Progress | None
+) -> xarray.Dataset:
+    store, file = TileStore(folder, run_key(study)), folder / SWEEP_FILE
+    if fresh:
+        store.clear()
+    elif file.exists():
+        known = read_dataset(file)
+        if known.attrs.get("study_sha256") == study.sha256 and known.attrs.get("explorer_version") == explorer.__version__:
+            return known
+    grid = Grid(study, scenarios)
+    missing = []
+    for tile in tiles:
+        stored = store.get(tile.number)
+        if stored is None:
+            missing.append(tile)
+        else:
+            grid.put(tile, stored)
+    for done, (tile, result) in enumerate(_computed(study, scenarios, missing, jobs), len(tiles) - len(missing) + 1):
+        store.put(tile.number, result)
+        grid.put(tile, result)
+        if progress:
+            progress(done, len(tiles))
+    dataset = grid.dataset()
+    write_dataset(dataset, file)
+    store.clear()
+    return dataset
+
+
+def _computed(
+    study: Study, scenarios: Scenarios, tiles: Iterable[Tile], jobs: int
+) -> Iterable[tuple[Tile, TileResult]]:
+    """Tiles as they finish. Threads: LAPACK and the kernels release the interpreter, and nothing is copied."""
+
+    def solve(tile: Tile) -> tuple[Tile, TileResult]:
+        return tile, compute(study, scenarios, tile)
+
+    if jobs == 1:
+        return (solve(tile) for tile in tiles)
+    work = (joblib.delayed(solve)(tile) for tile in tiles)
+    return joblib.Parallel(n_jobs=jobs, prefer="threads", return_as="generator_unordered")(work)  # type: ignore[no-any-return]

@@ -1,0 +1,231 @@
+"""Maps of gain against sample period: a verdict and a decision in, Figures for the commands and the sheet out.
+
+With one period or one gain there is no plane: the same question is then answered by lines (see lines).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from matplotlib.axes import Axes
+from matplotlib.cm import ScalarMappable
+from matplotlib.colors import BoundaryNorm, ListedColormap
+from matplotlib.figure import Figure
+from matplotlib.lines import Line2D
+
+from explorer.errors import OptionError
+from explorer.views import layers, lines, style
+from explorer.views.plane import Floats, Mark, Plane, Requirement, marks, outline_at, share_at, take_plane
+
+_MAP = (0.075, 0.135, 0.585, 0.715)
+_LEGEND = (0.69, 0.85)
+_BAR = (0.695, 0.50, 0.016, 0.35)
+_SHEET = (0.062, 0.13, 0.80, 0.72)
+
+
+def region_map(
+    verdict: xr.Dataset,
+    decision: Mapping[str, Any] | None = None,
+    tolerance_scale: float = 1.0,
+    design: Mapping[str, float] | None = None,
+) -> Figure:
+    """Where every requirement holds, each requirement's edge, what binds outside, and the decision's points.
+
+    The nominal plant's outline is drawn too where the verdict has tolerance scale 0. NaN is drawn as unknown, and
+    an empty region is said in words. Of further design variables, `design` = {name: SI value} chooses the slice.
+    Raises OptionError when the scale or the design was not swept.
+    """
+    plane = take_plane(verdict, tolerance_scale, design, decision)
+    points = marks(plane, decision)
+    if _is_line(plane):
+        return lines.slack_lines(plane, points)
+    figure, axes = _new_map(plane, f"All requirements over {plane.box}")
+    entries = draw_region(axes, plane, points)
+    if tolerance_scale and (outline := outline_at(verdict, plane, 0.0)) is not None:
+        entries[1:1] = layers.nominal_outline(axes, plane, outline)
+    style.add_legend(figure, entries, *_LEGEND, room=410)
+    return figure
+
+
+def draw_region(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> list[style.Entry]:
+    """The region map's data on axes that `layers.prepare` has set up; returns the entries of its legend."""
+    held = layers.known_ground(axes, plane)
+    areas = layers.binding_areas(axes, plane)
+    entries = [style.Entry("Where all requirements hold")] if plane.feasible.any() else []
+    entries += layers.region(axes, plane)
+    entries += layers.draw_marks(axes, plane, points)
+    edges = layers.edges(axes, plane)
+    layers.name_areas(axes, plane)
+    layers.tag_edges(axes, edges)
+    entries.append(style.Entry("Requirements: edge, and tint where it binds"))
+    entries += [_requirement_entry(plane, index, index in edges, areas) for index in range(len(plane.requirements))]
+    if not plane.feasible.any():
+        layers.say_empty(axes, plane)
+    return entries + held
+
+
+def slack_map(
+    verdict: xr.Dataset,
+    show: str = "slack",
+    sweep: xr.Dataset | None = None,
+    tolerance_scale: float = 1.0,
+    design: Mapping[str, float] | None = None,
+    decision: Mapping[str, Any] | None = None,
+) -> Figure:
+    """One field over the plane: `show` is "slack" (the least), "binding", "share" or a requirement's name.
+
+    A requirement that carries one of those three names is reached by them no longer. "share" needs the sweep's
+    Dataset. Slack beyond ±1, infinities included, takes the end colours. Raises OptionError for any other `show`.
+    """
+    plane = take_plane(verdict, tolerance_scale, design, decision)
+    points = marks(plane, decision)
+    names = [requirement.name for requirement in plane.requirements]
+    if show not in ("slack", "binding", "share", *names):
+        raise OptionError(f"nothing called {show!r} to show; there are: {', '.join(('slack', 'binding', 'share', *names))}")
+    if show == "share":
+        if sweep is None:
+            raise OptionError("the share of scenarios is in the sweep, not in the verdict: give both")
+        return _share_map(plane, share_at(sweep, plane), points)
+    if _is_line(plane):
+        chosen = (names.index(show),) if show in names else None
+        return lines.slack_lines(plane, points, chosen)
+    if show == "binding":
+        return _binding_map(plane, points)
+    if show == "slack":
+        return _field_map(plane, plane.least, f"Least slack of all requirements over {plane.box}", points)
+    index = names.index(show)
+    heading = f"Worst slack of {_once(plane.requirements[index])}, over {plane.box}"
+    return _field_map(plane, plane.slack[index], heading, points)
+
+
+def slack_sheet(
+    verdict: xr.Dataset,
+    tolerance_scale: float = 1.0,
+    design: Mapping[str, float] | None = None,
+    decision: Mapping[str, Any] | None = None,
+) -> Figure:
+    """Every requirement's slack in a panel of its own, one colour scale; the common region outlined in each."""
+    plane = take_plane(verdict, tolerance_scale, design, decision)
+    if _is_line(plane):
+        return lines.slack_lines(plane, marks(plane, decision))
+    figure = style.new_figure(plane.title, _subtitle(plane, f"Slack of each requirement over {plane.box}"), plane.provenance)
+    count = len(plane.requirements)
+    columns = int(np.ceil(np.sqrt(count)))
+    rows = int(np.ceil(count / columns))
+    left, bottom, width, height = _SHEET
+    for index, requirement in enumerate(plane.requirements):
+        row, column = divmod(index, columns)
+        place = (
+            left + width * (column / columns + 0.006),
+            bottom + height * ((rows - 1 - row) / rows),
+            width / columns * 0.90,
+            height / rows * (1 - 0.19 * rows / 2),
+        )
+        axes = style.new_axes(figure, place)
+        layers.prepare(axes, plane, most=6 if columns < 3 else 4)
+        layers.signed_field(axes, plane, plane.slack[index])
+        layers.zero_line(axes, plane, plane.least, colors="white", linewidths=3.4)
+        layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=1.6)
+        axes.set_title(f"{index + 1}  {_once(requirement)}", loc="left", size=11, color=style.INK, parse_math=False)
+        if column:
+            axes.set_ylabel("")
+        if row < (count - 1 - column) // columns:
+            axes.set_xlabel("")
+    _slack_bar(figure, (left + width + 0.025, bottom, 0.014, height - 0.05))
+    return figure
+
+
+def _field_map(plane: Plane, field: Floats, heading: str, points: Mapping[str, Mark]) -> Figure:
+    figure, axes = _new_map(plane, heading)
+    held = layers.known_ground(axes, plane)
+    layers.signed_field(axes, plane, field)
+    layers.zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
+    entries = [style.Entry("slack 0: the edge", (Line2D([], [], color=style.INK, linewidth=2.6),))]
+    if field is not plane.least and layers.zero_line(axes, plane, plane.least, colors="white", linewidths=1.4) is not None:
+        halo = Line2D([], [], color="white", linewidth=1.6, path_effects=style.halo(style.QUIET_INK, 3.0))
+        entries.append(style.Entry("where all requirements hold", (halo,)))
+    entries += layers.draw_marks(axes, plane, points) + held
+    _slack_bar(figure, _BAR)
+    style.add_legend(figure, entries, _LEGEND[0], _BAR[1] - 0.06, room=200)
+    return figure
+
+
+def _binding_map(plane: Plane, points: Mapping[str, Mark]) -> Figure:
+    figure, axes = _new_map(plane, f"Which requirement has the least slack, over {plane.box}")
+    held = layers.known_ground(axes, plane)
+    areas = layers.binding_areas(axes, plane)
+    entries = [style.Entry("Least slack has")]
+    entries += [
+        style.Entry(f"{index + 1}  {plane.requirements[index].full}", layers.area_sample(index)) for index in sorted(areas)
+    ]
+    if layers.zero_line(axes, plane, plane.least, colors="white", linewidths=5.0) is not None:
+        layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=2.6)
+        entries.append(style.Entry("edge of the region", (Line2D([], [], color=style.INK, linewidth=2.6),)))
+        layers.say_inside(axes, plane)
+    layers.name_areas(axes, plane, everywhere=True)
+    entries += layers.draw_marks(axes, plane, points) + held
+    style.add_legend(figure, entries, *_LEGEND, room=410)
+    return figure
+
+
+def _share_map(plane: Plane, share: Floats, points: Mapping[str, Mark]) -> Figure:
+    if _is_line(plane):
+        return lines.share_lines(plane, share)
+    figure, axes = _new_map(plane, f"Share of scenarios that meet every requirement, within {plane.box}")
+    held = layers.known_ground(axes, plane)
+    layers.share_field(axes, plane, share)
+    entries = [style.Entry("every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))]
+    entries += layers.draw_marks(axes, plane, points) + held
+    bands = [f"{low:.0%} to {high:.0%}" for low, high in zip(style.SHARE_LEVELS, style.SHARE_LEVELS[1:], strict=False)]
+    swatches = [style.swatch(color) for color in style.SHARES]
+    shades = [style.Entry(text.replace("%", " %"), artists) for text, artists in zip([*bands, "all"], swatches, strict=True)]
+    entries = [style.Entry("Scenarios that meet everything"), *reversed(shades), *entries]
+    style.add_legend(figure, entries, *_LEGEND, room=410)
+    return figure
+
+
+def _new_map(plane: Plane, heading: str) -> tuple[Figure, Axes]:
+    figure = style.new_figure(plane.title, _subtitle(plane, heading), plane.provenance)
+    axes = style.new_axes(figure, _MAP)
+    layers.prepare(axes, plane)
+    return figure, axes
+
+
+def _subtitle(plane: Plane, heading: str) -> str:
+    return f"{heading}; {plane.slice}" if plane.slice else heading
+
+
+def _slack_bar(figure: Figure, place: tuple[float, float, float, float]) -> None:
+    """The scale of the signed field: bands of equal height, their limits in plain numbers."""
+    axes = figure.add_axes(place)
+    colors = ListedColormap([*style.MISSED, *style.MET])
+    edges = [style.SLACK_LEVELS[0] - 1, *style.SLACK_LEVELS, style.SLACK_LEVELS[-1] + 1]
+    bar = figure.colorbar(
+        ScalarMappable(BoundaryNorm(edges, colors.N), colors), cax=axes, spacing="uniform", ticks=style.SLACK_LEVELS
+    )
+    bar.ax.set_yticklabels([style.plain(level).replace("-", "−") for level in style.SLACK_LEVELS], size=11)
+    bar.ax.tick_params(length=0, labelcolor=style.INK)
+    bar.ax.axhline(0.0, color=style.INK, linewidth=2.6)
+    bar.outline.set_edgecolor(style.FRAME)
+    for height, word in ((0.25, "missed"), (0.75, "met")):
+        bar.ax.text(4.4, height, word, transform=bar.ax.transAxes, size=11, color=style.INK, va="center", rotation=90)
+
+
+def _requirement_entry(plane: Plane, index: int, has_edge: bool, areas: set[int]) -> style.Entry:
+    text = f"{index + 1}  {plane.requirements[index].full}"
+    known = plane.slack[index][~np.isnan(plane.slack[index])]
+    if not has_edge and known.size:
+        text += "\n(met everywhere here)" if (known >= 0).all() else "\n(missed everywhere here)"
+    artists = layers.area_sample(index) if index in areas else ()
+    return style.Entry(text, (*artists, *layers.edge_sample(index)))
+
+
+def _once(requirement: Requirement) -> str:
+    return requirement.full.replace("\n", ": ")
+
+
+def _is_line(plane: Plane) -> bool:
+    return min(plane.period.values.size, plane.gain.values.size) == 1

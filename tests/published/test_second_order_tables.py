@@ -1,0 +1,141 @@
+"""The second-order system's tables and rules, against loops with just such poles and against fast-sampled loops."""
+
+import numpy as np
+import pytest
+from numpy import cos, exp, log, pi, sqrt
+
+AGREEMENT = 1e-9  # promised for every measure by poles
+OMEGA, PERIOD = 8.0, 0.1  # natural frequency [rad/s] and sample period [s] of the loops with exact poles
+
+
+def exact_pair(zeta):
+    """A plant in z that unity feedback closes with the poles exp(sT), s = -zeta OMEGA +- j OMEGA sqrt(1 - zeta^2)."""
+    alpha = exp(-zeta * OMEGA * PERIOD)
+    beta = cos(OMEGA * PERIOD * sqrt(1 - zeta**2))
+    return f"(({-2 * alpha * beta!r})*z + {alpha**2!r})/z^2"
+
+
+def fast_motor(zeta):
+    """1/(s(s + 2 zeta)): sampled fast, unity feedback closes it to 1/(s^2 + 2 zeta s + 1)."""
+    return f"1/(s*(s + {2 * zeta}))"
+
+
+# Overshoot in % for a damping ratio: Ogata, Modern Control Engineering, chapter on transient response, chart of
+# overshoot against damping ratio; Nise, Control Systems Engineering, chapter 4; both from memory.
+OVERSHOOT = {0.2: 52.7, 0.3: 37.2, 0.4: 25.4, 0.5: 16.3, 0.6: 9.5, 0.7: 4.6, 0.8: 1.5}
+
+
+@pytest.mark.parametrize("zeta", OVERSHOOT)
+def test_overshoot_by_poles(measured, zeta):
+    values = measured(
+        exact_pair(zeta), ["overshoot", "damping ratio", "natural frequency"], sampled_at=f"{PERIOD} s"
+    )
+    overshoot = values["overshoot"][0, 0]
+    assert overshoot == pytest.approx(OVERSHOOT[zeta], abs=0.05)  # half of the last printed digit
+    assert overshoot == pytest.approx(100 * exp(-pi * zeta / sqrt(1 - zeta**2)), rel=1e-8)  # d ln/d zeta is up to 15
+    assert values["damping ratio"][0, 0] == pytest.approx(zeta, rel=AGREEMENT)
+    assert values["natural frequency"][0, 0] == pytest.approx(OMEGA, rel=AGREEMENT)
+
+
+@pytest.mark.parametrize("zeta", OVERSHOOT)
+def test_overshoot_of_the_fast_sampled_response(measured, zeta):
+    # Half a period of delay takes about T/4 = 2.5e-4 off the damping ratio, some 0.03 % of overshoot.
+    values = measured(fast_motor(zeta), ["overshoot"], period=[1e-3], basis="response")
+    assert values["overshoot"][0, 0] == pytest.approx(OVERSHOOT[zeta], abs=0.05 + 0.04)
+
+
+@pytest.mark.parametrize("zeta", [0.2, 0.5, 0.7])
+def test_time_to_peak(measured, zeta):
+    # Ogata, Modern Control Engineering, chapter on transient response: t_p = pi/(w_n sqrt(1 - zeta^2)); from memory.
+    exact = measured(exact_pair(zeta), ["time to peak"], sampled_at=f"{PERIOD} s")["time to peak"][0, 0]
+    assert exact == pytest.approx(pi / (OMEGA * sqrt(1 - zeta**2)), rel=AGREEMENT)
+    # The first maximum of a fast-sampled response is at the same place, but for a shift of the order of T.
+    fast = measured(fast_motor(zeta), ["time to peak"], period=[1e-3], basis="response")["time to peak"][0, 0]
+    assert fast == pytest.approx(pi / sqrt(1 - zeta**2), abs=2e-3)
+
+
+@pytest.mark.parametrize(
+    ("band", "rule", "rounding"),
+    [
+        # 4/(zeta w_n) for 2 %, 3/(zeta w_n) for 5 %: Ogata, Modern Control Engineering. 4.6/(zeta w_n) for 1 %:
+        # Franklin, Powell and Workman, Digital Control of Dynamic Systems. From memory. They round
+        # ln 50 = 3.912, ln 20 = 2.996 and ln 100 = 4.605.
+        ("2 %", 4.0, 0.023),
+        ("5 %", 3.0, 0.002),
+        ("1 %", 4.6, 0.0012),
+    ],
+)
+@pytest.mark.parametrize("zeta", [0.3, 0.7])
+def test_settling_time_rules(measured, band, rule, rounding, zeta):
+    values = measured(
+        exact_pair(zeta), ["settling time"], sampled_at=f"{PERIOD} s", option=f'band = "{band}"'
+    )
+    settling = values["settling time"][0, 0]
+    assert settling == pytest.approx(rule / (zeta * OMEGA), rel=rounding)
+    assert settling == pytest.approx(-log(float(band[0]) / 100) / (zeta * OMEGA), rel=AGREEMENT)
+
+
+def test_settling_band_is_two_percent_unless_given(measured):
+    settling = measured(exact_pair(0.5), ["settling time"], sampled_at=f"{PERIOD} s")["settling time"][0, 0]
+    assert settling == pytest.approx(log(50) / (0.5 * OMEGA), rel=AGREEMENT)
+
+
+@pytest.mark.parametrize(
+    ("zeta", "printed"),
+    # Nise, Control Systems Engineering, chapter 4, normalised rise time from 10 % to 90 %, from memory.
+    [(0.2, 1.203), (0.3, 1.321), (0.4, 1.463), (0.5, 1.638), (0.6, 1.854), (0.7, 2.126), (0.8, 2.467)],
+)
+def test_rise_time(measured, zeta, printed):
+    values = measured(fast_motor(zeta), ["rise time"], period=[1e-3])
+    assert values["rise time"][0, 0] == pytest.approx(printed, abs=5e-4 + 1e-3)  # rounding and one period
+
+
+@pytest.mark.parametrize(
+    ("zeta", "phase_margin", "resonance_peak", "bandwidth"),
+    [
+        # Phase margin in degrees and bandwidth over w_n: Nise, Control Systems Engineering, chapter 10;
+        # resonance peak 1/(2 zeta sqrt(1 - zeta^2)): Kuo, Automatic Control Systems, chapter on frequency
+        # response. From memory.
+        (0.2, 22.6, 2.552, 1.510),
+        (0.3, 33.3, 1.747, 1.454),
+        (0.4, 43.1, 1.364, 1.375),
+        (0.5, 51.8, 1.155, 1.272),
+        (0.6, 59.2, 1.042, 1.148),
+    ],
+)
+def test_frequency_response_table(measured, zeta, phase_margin, resonance_peak, bandwidth):
+    # At T = 1e-4 the hold costs w_c T/2 = 5e-5 rad = 0.003 deg.
+    values = measured(fast_motor(zeta), ["phase margin", "resonance peak", "bandwidth"], period=[1e-4])
+    assert values["phase margin"][0, 0] == pytest.approx(phase_margin, abs=0.05 + 0.004)
+    assert values["resonance peak"][0, 0] == pytest.approx(resonance_peak, abs=5e-4 + 4e-4)
+    assert values["bandwidth"][0, 0] == pytest.approx(bandwidth, abs=5e-4 + 1e-4)
+
+
+@pytest.mark.parametrize("zeta", [0.3, 0.5, 0.7])
+def test_damping_line_meets_the_negative_axis_at_the_overshoot(measured, zeta):
+    # The logarithmic spiral of constant damping, Franklin, Powell and Workman, z-plane chart, from memory: it
+    # reaches half the sampling rate at z = -exp(-pi zeta/sqrt(1 - zeta^2)), for 0.5 at -0.163.
+    crossing = exp(-pi * zeta / sqrt(1 - zeta**2))
+    assert crossing == pytest.approx(OVERSHOOT[zeta] / 100, abs=5e-4)
+    values = measured(f"{crossing!r}/z", ["damping ratio", "natural frequency"], sampled_at=f"{PERIOD} s")
+    assert values["damping ratio"][0, 0] == pytest.approx(zeta, rel=AGREEMENT)
+    assert values["natural frequency"][0, 0] == pytest.approx(pi / PERIOD / sqrt(1 - zeta**2), rel=AGREEMENT)
+
+
+def test_quarter_of_the_sampling_rate_is_the_imaginary_axis(measured):
+    # Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 4-2, mapping of the s-plane, from memory: z = +-j at
+    # w = w_s/4.
+    values = measured("1/z^2", ["damping ratio", "natural frequency"], sampled_at=f"{PERIOD} s")
+    assert values["damping ratio"][0, 0] == pytest.approx(0, abs=AGREEMENT)
+    assert values["natural frequency"][0, 0] == pytest.approx(pi / 2 / PERIOD, rel=AGREEMENT)
+
+
+def test_samples_per_cycle_of_a_sampled_example(measured):
+    # Ogata 1995, section 4-3, design example of a damped oscillation of 10 samples per cycle with damping ratio
+    # 0.5, from memory: |z| = exp(-2 pi 0.5/sqrt(1 - 0.25) w_d/w_s) = 0.6958 at the angle 36 deg.
+    assert exp(-2 * pi * 0.5 / sqrt(0.75) / 10) == pytest.approx(0.6958, abs=5e-5)
+    real = 0.6958 * cos(pi / 5)
+    names = ["damping ratio", "time to peak"]
+    values = measured(f"(({-2 * real!r})*z + {0.6958**2!r})/z^2", names, sampled_at=f"{PERIOD} s")
+    assert values["damping ratio"][0, 0] == pytest.approx(0.5, abs=2e-4)  # four printed digits
+    assert values["time to peak"][0, 0] == pytest.approx(5 * PERIOD, rel=AGREEMENT)
