@@ -51,6 +51,7 @@ VERDICT = {
     "nominal_slack": Stored((MEASURE, OTHERS, PERIOD, GAIN), "1", "slack of the nominal plant"),
     "limit": Stored((MEASURE, PERIOD), "", "the limit in the measure's unit at each period"),
     "sense": Stored((MEASURE,), "", "at least, at most or below"),
+    "scenario_scale": Stored((SCENARIO,), "1", "the tolerance scale at which each scenario of the sweep enters"),
 }  # fmt: skip
 
 

@@ -20,7 +20,7 @@ NAMES = ("well damped", "time to peak", "processor load", "stability")
 KINDS = ("damping ratio", "time to peak", "processor load", "stability")
 UNITS = ("1", "s", "%", "1")
 SENSES = ("at least", "at most", "at most", "below")
-LIMITS = (0.6, 0.12, 5.0, np.nan)
+LIMITS = (0.5, 0.18, 10.0, np.nan)
 
 
 def worst_values(scale: float, lead: Any, period: Any, gain: Any) -> list[Any]:
@@ -72,7 +72,7 @@ def run(
     slack = slack.transpose(*worst.dims)
     least = slack.min("measure", skipna=False)
     binding = slack.fillna(0.0).argmin("measure").where(least.notnull(), -1).astype(int)
-    share = (0.5 + least.clip(-0.5, 0.5)).where(least < 0, 1.0).where(least.notnull())
+    share = np.exp(4 * least.clip(max=0.0))
     sweep = xr.Dataset({"worst_value": worst, "share_met": share, **scenario}, attrs=attrs)
     limits_by_period = limit.expand_dims(period=period.size).transpose("measure", "period")
     fields = {"slack": slack, "least_slack": least, "binding": binding, "feasible": least >= 0, "limit": limits_by_period}

@@ -75,11 +75,11 @@ def _conversion(collector: Collector, section: LoopSection, compensator: Node | 
 
 
 def _computing_delay(collector: Collector, section: LoopSection, time_unit: str, in_z: bool) -> Delay | None:
-    """A time, or a share of the sample period written as "0.5 period"; whole samples for a plant in z."""
+    """A time, or a share of the sample period ("0.5 period", "1 sample"); whole samples for a plant in z."""
     path = ("loop", "computing_delay")
     try:
         quantity = read_quantity(section.computing_delay)
-        share = quantity.value if quantity.periods == 1 else None
+        share = quantity.value if quantity.periods == 1 or quantity.samples == 1 else None
     except QuantityError:
         share = None
     if share is not None:

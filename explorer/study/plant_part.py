@@ -10,7 +10,7 @@ from explorer.study.dimensions import Measured
 from explorer.study.expressions import FUNCTIONS, Name, Node, Number, closest, depends_on
 from explorer.study.locate import Path
 from explorer.study.model import RESERVED, Parameter, Plant
-from explorer.study.quantities import Dimension, Quantity
+from explorer.study.quantities import Dimension, Quantity, QuantityError, read_quantity
 from explorer.study.schema import ParameterSection, PlantSection, StatesSection, shown
 
 _NAME = re.compile(r"[A-Za-z_μ][A-Za-z_0-9]{0,39}")
@@ -151,13 +151,13 @@ def _variants(
 
 
 def read_plant(
-    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], time_unit: str
+    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], sampled_at: float, time_unit: str
 ) -> Plant | None:
-    """The plant by transfer in s or z, or by matrices; time_unit "s" or "sample"."""
+    """The plant by transfer in s or z, or by matrices; sampled_at 0 for s, time_unit "s" or "sample"."""
     if (section.transfer is None) == (section.states is None):
         collector.fault(("plant",), "found " + ("both" if section.transfer else "neither"), "allowed: transfer or states, one of them")
         return None
-    dead_time = _dead_time(collector, section, dimensions, time_unit)
+    dead_time = _dead_time(collector, section, dimensions, sampled_at, time_unit)
     if section.states is not None:
         if section.sampled_at is not None:
             collector.fault(("plant", "sampled_at"), "found with states", "allowed: only with a transfer in z", "Remove it.")
@@ -184,9 +184,9 @@ def read_plant(
 
 
 def _dead_time(
-    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], time_unit: str
+    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], sampled_at: float, time_unit: str
 ) -> Node | None:
-    """A parameter's name or a time; None for none."""
+    """A parameter's name, a time, or whole samples for a plant in z; None for none."""
     value, path = section.dead_time, ("plant", "dead_time")
     if isinstance(value, str) and _NAME.fullmatch(value.strip()):
         name = value.strip()
@@ -198,8 +198,20 @@ def _dead_time(
         if not measured.bare and measured.dimension != SECOND and time_unit == "s":
             collector.fault(path, f"{name} is in [{measured.dimension}]", "allowed: a parameter in [s]")
         return Name(name, 1)
-    time = collector.time(value, path, time_unit)
+    samples = _samples(value) if sampled_at else None
+    time = collector.time(value, path, time_unit) if samples is None else samples * sampled_at
+    if time is not None and sampled_at and abs(time / sampled_at - round(time / sampled_at)) > 1e-9:
+        collector.fault(path, f"found {shown(value)}", "allowed: whole samples with a plant given in z")
     return Number(time, 1) if time else None
+
+
+def _samples(value: str | int | float) -> float | None:
+    """The number in "2 samples"; None for anything else."""
+    try:
+        quantity = read_quantity(value)
+    except QuantityError:
+        return None
+    return quantity.value if quantity.samples == 1 and quantity.value >= 0 else None
 
 
 def _states(

@@ -214,7 +214,7 @@ class _Unit:
 
 
 def _tabulate() -> dict[str, _Unit]:
-    """Every symbol with its unit; whole symbols go before prefixed ones: cd is the candela."""
+    """Every symbol with its unit. None collide (day and inch take no prefix); a whole symbol would win."""
     names = _BASE + _COUNTED
     units = {name: _Unit(exponents=tuple(int(name == other) for other in names)) for name in names}
     units["π"] = _Unit(pi=1)

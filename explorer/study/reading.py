@@ -103,7 +103,8 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     sampled_at = _sampled_at(collector, plant_section)
     time_unit = sampled_at[1] if sampled_at else "s"
     in_z = plant_section is not None and plant_section.sampled_at is not None
-    plant = read_plant(collector, plant_section, dimensions, time_unit) if plant_section else None
+    period = sampled_at[0] if sampled_at else 0.0
+    plant = read_plant(collector, plant_section, dimensions, period, time_unit) if plant_section else None
     axes, variables = read_axes(collector, sweep_table, list(parameters), in_z)
     scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
     if in_z and sampled_at:

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from explorer.errors import OptionError
 from explorer.measures.asking import read_study
-from explorer.names import MEASURE, PERIOD, VERDICT, dims_of
+from explorer.names import MEASURE, PARAMETER, PERIOD, VERDICT, dims_of
 from explorer.study.collect import Collector
 from explorer.study.expressions import closest
 from explorer.study.model import Requirement, Study
@@ -58,10 +58,11 @@ def judge(dataset: xarray.Dataset, limits: Limits | None = None) -> xarray.Datas
         "nominal_slack": nominal,
         "limit": np.stack([one.limits(period) for one in requirements]),
         "sense": np.array([one.sense for one in requirements], dtype=object),
+        "scenario_scale": dataset["scenario_scale"].values,
     }
     others = tuple(axis.name for axis in study.design)
     variables = {name: (dims_of(VERDICT[name], others), array, _attributes(name)) for name, array in arrays.items()}
-    coordinates = {name: value for name, value in dataset.coords.items() if name not in ("scenario", "parameter", "parameter_unit")}
+    coordinates = {name: value for name, value in dataset.coords.items() if PARAMETER not in value.dims}
     attributes = dict(dataset.attrs) | {"limits": _stated(requirements)}
     return xarray.Dataset(variables, coordinates, attributes)
 

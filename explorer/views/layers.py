@@ -15,7 +15,6 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import PathPatch, Rectangle
 from matplotlib.path import Path
 from matplotlib.ticker import MaxNLocator
-from scipy.ndimage import distance_transform_edt
 
 from explorer.views import style
 from explorer.views.plane import Floats, Mark, Plane
@@ -39,8 +38,7 @@ def known_ground(axes: Axes, plane: Plane) -> list[style.Entry]:
     count = int(plane.unknown.sum())
     if not count:
         return []
-    words = "1 point unknown" if count == 1 else f"{count} points unknown"
-    return [style.Entry(f"{words}: not solved, not judged", style.swatch(style.UNKNOWN, "xx", style.UNKNOWN_HATCH))]
+    return [style.Entry(f"unknown: {count} of {plane.unknown.size} points", style.swatch(style.UNKNOWN, "xx", style.UNKNOWN_HATCH))]
 
 
 def binding_areas(axes: Axes, plane: Plane) -> set[int]:
@@ -64,25 +62,23 @@ def binding_areas(axes: Axes, plane: Plane) -> set[int]:
     return shown
 
 
-def region(axes: Axes, plane: Plane) -> list[style.Entry]:
-    """The region where all hold, darker with more slack, lines of equal least slack, and its outline."""
+def region(axes: Axes, plane: Plane) -> tuple[list[style.Entry], Any | None]:
+    """The region where all hold, darker with more slack, and lines of equal least slack; those are returned too."""
     if not plane.feasible.any():
-        return []
+        return [], None
     field = _bounded(plane.least)
     levels = [level for level in style.SLACK_LEVELS if level >= 0]
     x, y = plane.period.values, plane.gain.values
     axes.contourf(x, y, field, [*levels, _BOUND], colors=style.MET, zorder=3)
     inner = contour_levels(float(np.nanmax(field)))
     entries = [style.Entry("all hold, the darker the more slack", style.swatch(style.MET[1]))]
+    contours = None
     if inner:
         contours = axes.contour(x, y, field, inner, colors="white", linewidths=1.0, zorder=4)
-        labels = axes.clabel(contours, fmt=style.plain, fontsize=11, colors="white", inline_spacing=8)
-        for label in labels:
-            label.set(path_effects=style.halo(style.MET[-1], 2.2), zorder=7)
         sample = Line2D([], [], color="white", linewidth=1.2)
         entries.append(style.Entry("line of equal least slack", (*style.swatch(style.MET[2]), sample)))
     zero_line(axes, plane, plane.least, colors="white", linewidths=6.0, zorder=5)
-    return entries
+    return entries, contours
 
 
 def contour_levels(top: float) -> list[float]:
@@ -94,16 +90,21 @@ def contour_levels(top: float) -> list[float]:
 
 
 def edges(axes: Axes, plane: Plane) -> dict[int, Floats]:
-    """Each requirement's line of slack 0; returns its vertices, (n, 2) in shown units, for those that have one."""
+    """Each requirement's line of slack 0; returns its vertices, (n, 2) in shown units, for those that have one.
+
+    Beyond the edge of a `stability` requirement every other slack is -inf: that edge is stability's alone.
+    """
+    kinds = [requirement.kind for requirement in plane.requirements]
+    unstable = plane.slack[kinds.index("stability")] < 0 if "stability" in kinds else np.zeros_like(plane.unknown)
     found = {}
-    for index in range(len(plane.requirements)):
+    for index, slack in enumerate(plane.slack):
         look = style.stroke(index)
-        path = zero_line(
-            axes, plane, plane.slack[index], colors=look.line, linestyles=[look.dashes], linewidths=2.0, zorder=6
-        )
-        if path is not None:
-            path.set(path_effects=style.halo("white", 3.2), gid=f"edge {index + 1}")
-            found[index] = np.concatenate([np.asarray(one.vertices) for one in path.get_paths()])
+        own = np.where(unstable & np.isneginf(slack), np.nan, slack)
+        line = {"colors": look.line, "linestyles": [look.dashes], "linewidths": 2.0}
+        traced = zero_line(axes, plane, own, **line)
+        if traced is not None:
+            traced.set(path_effects=style.halo("white", 3.2), gid=f"edge {index + 1}")
+            found[index] = np.concatenate([np.asarray(path.vertices) for path in traced.get_paths()])
     return found
 
 
@@ -113,16 +114,21 @@ def zero_line(axes: Axes, plane: Plane, field: Floats, zorder: float = 6, **look
     known = bounded[~np.isnan(bounded)]
     if not known.size or not known.min() < 0 <= known.max():
         return None
-    # A plateau at exactly 0 is met; traced a hair below, its edge is found too.
+    # A plateau at exactly 0 is met; traced a hair below, its edge is found too. Below 0 dashes would be the default.
+    look = {"linestyles": "solid"} | look
     return axes.contour(plane.period.values, plane.gain.values, bounded, [-1e-12], zorder=zorder, **look)
 
 
-def nominal_outline(axes: Axes, plane: Plane, least: Floats) -> list[style.Entry]:
-    """A thin line around the nominal plant's region: what the tolerances cost is between it and the region."""
-    if zero_line(axes, plane, least, colors=style.INK, linewidths=1.1, linestyles=[(0, (1, 2))], zorder=5.5) is None:
-        return []
-    sample = Line2D([], [], color=style.INK, linewidth=1.1, linestyle=(0, (1, 2)))
-    return [style.Entry("outline for the nominal plant alone", (sample,))]
+def nominal_outline(axes: Axes, plane: Plane, least: Floats) -> tuple[style.Entry, Floats] | None:
+    """A thin line around the nominal plant's region, to show what the tolerances cost; its entry and vertices."""
+    look = {"linewidths": 1.2, "linestyles": [(0, (1, 1.6))]}
+    traced = zero_line(axes, plane, least, colors=style.INK, zorder=5.5, **look)
+    if traced is None:
+        return None
+    traced.set_gid("nominal outline")
+    sample = Line2D([], [], color=style.INK, linewidth=1.2, linestyle=(0, (1, 1.6)))
+    entry = style.Entry("region of the nominal plant alone", (sample,))
+    return entry, np.concatenate([np.asarray(path.vertices) for path in traced.get_paths()])
 
 
 def signed_field(axes: Axes, plane: Plane, field: Floats) -> None:
@@ -133,14 +139,13 @@ def signed_field(axes: Axes, plane: Plane, field: Floats) -> None:
 
 
 def share_field(axes: Axes, plane: Plane, share: Floats) -> None:
-    """Shares 0..1 in bands, only exactly 1 in the darkest, and a bold line around it."""
-    x, y = plane.period.values, plane.gain.values
-    least = 1.0 - 1e-9  # what is less than one scenario in 1e9 is none
-    bands = [-1e-9, *style.SHARE_LEVELS[1:-1], least, 1.0 + 1e-9]
-    axes.contourf(x, y, share, bands, colors=style.SHARES, zorder=3)
-    known = share[~np.isnan(share)]
-    if known.size and known.min() < least < known.max():
-        axes.contour(x, y, share, [least], colors=style.INK, linewidths=2.6, zorder=6)
+    """Shares 0..1 in bands; where all scenarios meet everything, which is the region, the darkest and a bold line."""
+    bands = [-1e-9, *style.SHARE_LEVELS[1:-1], 1.0 + 1e-9]
+    masked = np.ma.masked_invalid(share)
+    axes.contourf(plane.period.values, plane.gain.values, masked, bands, colors=style.SHARES[:-1], zorder=3)
+    # A plateau at 1 has no slope to trace its edge by; the least slack crosses 0 at the same place and has.
+    _fill(axes, plane, plane.least, facecolor=style.SHARES[-1], zorder=4, gid="all scenarios")
+    zero_line(axes, plane, plane.least, colors=style.INK, linewidths=2.6)
 
 
 def draw_marks(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> list[style.Entry]:
@@ -157,7 +162,6 @@ def draw_marks(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> list[sty
         axes.axvline(mark.period, gid="slowest", path_effects=style.halo(width=3.4), **dashed)
         bar = {"color": style.INK, "marker": "_", "markersize": 14, "markeredgewidth": 3, "linewidth": 5, "zorder": 8}
         axes.plot([mark.period] * 2, mark.window or (mark.gain, mark.gain), gid="slowest window", **bar)
-        _label(axes, mark.period, axes.get_ylim()[0], "slowest period", (0, 12))
         sample = Line2D([], [], **dashed)
         entries.append(style.Entry(f"slowest period: {mark.text}", (sample,)))
     return entries
@@ -165,81 +169,7 @@ def draw_marks(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> list[sty
 
 def _point(axes: Axes, mark: Mark, word: str, look: dict[str, Any]) -> style.Entry:
     axes.plot([mark.period], [mark.gain], linestyle="none", zorder=10, clip_on=False, gid=word, **look)
-    _label(axes, mark.period, mark.gain, word, (0, 13))
     return style.Entry(f"{word}: {mark.text}", (Line2D([], [], linestyle="none", **look),))
-
-
-def _label(axes: Axes, x: float, y: float, text: str, offset: tuple[float, float]) -> None:
-    """A word beside a point, on the side where the axes have room."""
-    across, up = axes.transAxes.inverted().transform(axes.transData.transform((x, y)))
-    left = across > 0.8
-    axes.annotate(
-        text, (x, y), xytext=(-11 if left else 11, -offset[1] if up > 0.9 else offset[1]), textcoords="offset points",
-        ha="right" if left else "left", va="center", size=13, weight="bold", color=style.INK, zorder=11,
-        path_effects=style.halo(width=4.0),
-    )  # fmt: skip
-
-
-def tag_edges(axes: Axes, vertices: Mapping[int, Floats]) -> None:
-    """Each edge's number in a disc on the line, as far as can be from the other edges, tags and the frame."""
-    shares = {index: _shares(axes, points) for index, points in vertices.items()}
-    placed: list[Floats] = []
-    for index, points in shares.items():
-        candidates = points[:: max(1, len(points) // 80)]
-        others = [other[:: max(1, len(other) // 200)] for key, other in shares.items() if key != index]
-        room = np.minimum(_gap(candidates, others), 0.08) + np.minimum(_gap(candidates, placed), 0.3)
-        frame = np.minimum(candidates, 1 - candidates).min(axis=1)
-        best = int(np.argmax(room + np.where(frame < 0.03, -1.0, 0.0)))
-        placed.append(candidates[best : best + 1])
-        color = style.stroke(index).line
-        axes.text(
-            *candidates[best], str(index + 1), transform=axes.transAxes, size=11, weight="bold", color=color,
-            ha="center", va="center", zorder=9, gid=f"tag {index + 1}",
-            bbox={"boxstyle": "circle,pad=0.22", "facecolor": "white", "edgecolor": color, "linewidth": 1.4},
-        )  # fmt: skip
-
-
-def name_areas(axes: Axes, plane: Plane, everywhere: bool = False) -> None:
-    """Name each binding area where it is widest: number and name if there is room, the number if there is little."""
-    inches = axes.get_position().width * axes.figure.get_figwidth()
-    for index, requirement in enumerate(plane.requirements):
-        mask = plane.binding == index
-        if not everywhere:
-            mask &= ~plane.feasible
-        depth = distance_transform_edt(np.pad(mask, 1))[1:-1, 1:-1]
-        row, column = np.unravel_index(int(depth.argmax()), depth.shape)
-        share = depth[row, column] / max(mask.shape)
-        if share < 0.03:
-            continue
-        fits = 0.115 * len(requirement.name) < 2 * share * inches * 1.2
-        look = style.stroke(index)
-        axes.text(
-            plane.period.values[column], plane.gain.values[row],
-            f"{index + 1} {requirement.name}" if fits else str(index + 1), size=13, color=look.line, ha="center",
-            va="center", zorder=8, parse_math=False, gid=f"area {index + 1}",
-            bbox={"boxstyle": "round,pad=0.25", "facecolor": look.tint, "edgecolor": "none"},
-        )  # fmt: skip
-
-
-def say_inside(axes: Axes, plane: Plane) -> None:
-    """Write in the region that all requirements hold there."""
-    depth = distance_transform_edt(np.pad(plane.feasible, 1))[1:-1, 1:-1]
-    row, column = np.unravel_index(int(depth.argmax()), depth.shape)
-    _label(axes, float(plane.period.values[column]), float(plane.gain.values[row]), "all hold", (0, 0))
-
-
-def say_empty(axes: Axes, plane: Plane) -> None:
-    """Say in words that nothing holds, and how much of the plane is unknown."""
-    if plane.unknown.all():
-        words = "Nothing is known here: no point could be judged."
-    elif plane.unknown.any():
-        words = "No point is known to meet every requirement."
-    else:
-        words = "Nowhere do all requirements hold at once."
-    axes.text(
-        0.5, 0.93, words, transform=axes.transAxes, size=16, weight="bold", color=style.INK, ha="center", va="center",
-        zorder=12, gid="empty", bbox={"boxstyle": "round,pad=0.5", "facecolor": "white", "edgecolor": style.INK},
-    )  # fmt: skip
 
 
 def area_sample(index: int) -> tuple[Any, ...]:
@@ -261,30 +191,16 @@ def _quiet(color: str) -> tuple[float, float, float]:
 
 
 def _bounded(field: Floats) -> np.ma.MaskedArray[Any, Any]:
-    return np.ma.masked_invalid(np.clip(field, -_BOUND, _BOUND))  # clip keeps NaN, and only NaN is masked
+    return np.ma.masked_array(np.clip(field, -_BOUND, _BOUND), np.isnan(field))  # clip keeps NaN, and only NaN is masked
 
 
 def _fill(axes: Axes, plane: Plane, field: Floats, zorder: float, facecolor: str, gid: str) -> PathPatch | None:
     """One patch where a field is at least 0; None where it nowhere is."""
-    known = field[~np.isnan(field)]
-    if not known.size or known.max() < 0:
+    bounded = _bounded(field)
+    if bounded.mask.all() or bounded.max() < 0:
         return None
-    masked = np.ma.masked_invalid(field)
-    traced = axes.contourf(plane.period.values, plane.gain.values, masked, [0.0, known.max() + 1.0])
+    traced = axes.contourf(plane.period.values, plane.gain.values, bounded, [0.0, _BOUND + 1.0])
     path: Path = traced.get_paths()[0]
     traced.remove()
     patch = PathPatch(path, facecolor=facecolor, linewidth=0, zorder=zorder, gid=gid)
     return axes.add_patch(patch)  # type: ignore[no-any-return]
-
-
-def _shares(axes: Axes, points: Floats) -> Floats:
-    """Points in shares of the axes' width and height."""
-    return np.asarray(axes.transAxes.inverted().transform(axes.transData.transform(points)))
-
-
-def _gap(points: Floats, others: list[Floats]) -> Floats:
-    """Distance of each point to the nearest of the others, in shares of the axes; inf without others."""
-    if not others:
-        return np.full(len(points), np.inf)
-    everything = np.concatenate(others)
-    return np.sqrt(((points[:, None, :] - everything[None, :, :]) ** 2).sum(axis=2)).min(axis=1)

@@ -10,10 +10,10 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
-from explorer.views import style
+from explorer.views import labels, style
 from explorer.views.plane import Axis, Floats, Mark, Plane
 
-_PLACE = (0.075, 0.135, 0.585, 0.715)
+_PLACE = (style.LEFT, 0.135, 0.585, 0.715)
 _LEGEND = (0.69, 0.85)
 _LOWEST, _HIGHEST = -1.0, 1.5  # slack that is shown; what lies beyond leaves the frame
 
@@ -44,10 +44,11 @@ def slack_lines(plane: Plane, points: Mapping[str, Mark], chosen: Sequence[int] 
         axes.plot(axis.values, drawn, markevery=(start, every), zorder=5, gid=f"slack {index + 1}", **line)
         text = f"{index + 1}  {plane.requirements[index].full}"
         entries.append(style.Entry(text, (Line2D([], [], **line),)))
-    axes.set_ylim(low, high)
-    axes.set_ylabel("slack (distance to the limit / limit)", fontsize=14, color=style.INK, labelpad=7)
     if not plane.feasible.any():
-        _say_empty(axes, plane)
+        labels.say_empty(axes, plane)
+        high += 0.17 * (high - low)  # room for the words above the lines
+    axes.set_ylim(low, high)
+    axes.set_ylabel("slack, as a share of the limit", fontsize=14, color=style.INK, labelpad=7)
     style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
@@ -101,6 +102,7 @@ def _new_lines(plane: Plane, heading: str, axis: Axis) -> tuple[Figure, Axes]:
     axes = style.new_axes(figure, _PLACE)
     style.scale_axis(axes, "x", axis.values, axis.label)
     axes.tick_params(axis="y", labelsize=12, color=style.FRAME, labelcolor=style.INK)
+    axes.set_axisbelow(True)
     axes.grid(axis="y", color=style.OUTSIDE, linewidth=0.8, zorder=0.5)
     return figure, axes
 
@@ -121,8 +123,7 @@ def _spans(axes: Axes, axis: Axis, least: Floats) -> list[style.Entry]:
     unknown = np.isnan(least)
     if unknown.any():
         _unknown_spans(axes, axis, unknown)
-        count = int(unknown.sum())
-        text = "1 point unknown" if count == 1 else f"{count} points unknown"
+        text = f"unknown: {int(unknown.sum())} of {unknown.size} points"
         entries.append(style.Entry(text, style.swatch(style.UNKNOWN, "xx", style.UNKNOWN_HATCH)))
     return entries
 
@@ -153,9 +154,3 @@ def _marks(axes: Axes, axis: Axis, plane: Plane, points: Mapping[str, Mark]) -> 
         entries.append(style.Entry(f"{word}: {mark.text}", (Line2D([], [], **look),)))
     return entries
 
-
-def _say_empty(axes: Axes, plane: Plane) -> None:
-    words = "Nothing is known here." if plane.unknown.all() else "Nowhere do all requirements hold at once."
-    box = {"boxstyle": "round,pad=0.5", "facecolor": "white", "edgecolor": style.INK}
-    look = {"size": 16, "weight": "bold", "color": style.INK, "ha": "center", "va": "center", "zorder": 12}
-    axes.text(0.5, 0.93, words, transform=axes.transAxes, gid="empty", bbox=box, **look)

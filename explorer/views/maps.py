@@ -5,6 +5,7 @@ With one period or one gain there is no plane: the same question is then answere
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Mapping
 from typing import Any
 
@@ -17,13 +18,13 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
 from explorer.errors import OptionError
-from explorer.views import layers, lines, style
+from explorer.views import labels, layers, lines, style
 from explorer.views.plane import Floats, Mark, Plane, Requirement, marks, outline_at, share_at, take_plane
 
-_MAP = (0.075, 0.135, 0.585, 0.715)
+_MAP = (style.LEFT, 0.135, 0.585, 0.715)
 _LEGEND = (0.69, 0.85)
-_BAR = (0.695, 0.50, 0.016, 0.35)
-_SHEET = (0.062, 0.13, 0.80, 0.72)
+_BAR = (0.695, 0.49, 0.016, 0.36)
+_SHEET = (0.13, 0.835)  # bottom and top of the panels
 
 
 def region_map(
@@ -43,28 +44,38 @@ def region_map(
     if _is_line(plane):
         return lines.slack_lines(plane, points)
     figure, axes = _new_map(plane, f"All requirements over {plane.box}")
-    entries = draw_region(axes, plane, points)
-    if tolerance_scale and (outline := outline_at(verdict, plane, 0.0)) is not None:
-        entries[1:1] = layers.nominal_outline(axes, plane, outline)
-    style.add_legend(figure, entries, *_LEGEND, room=410)
+    nominal = outline_at(verdict, plane, 0.0) if plane.tolerance_scale else None
+    style.add_legend(figure, draw_region(axes, plane, points, nominal), *_LEGEND, room=410)
     return figure
 
 
-def draw_region(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> list[style.Entry]:
-    """The region map's data on axes that `layers.prepare` has set up; returns the entries of its legend."""
+def draw_region(
+    axes: Axes, plane: Plane, points: Mapping[str, Mark], nominal: Floats | None = None
+) -> list[style.Entry]:
+    """The region map's data on axes that `layers.prepare` has set up; returns the entries of its legend.
+
+    `nominal` (gain, period) is the nominal plant's least slack, to be outlined.
+    """
     held = layers.known_ground(axes, plane)
     areas = layers.binding_areas(axes, plane)
-    entries = [style.Entry("Where all requirements hold")] if plane.feasible.any() else []
-    entries += layers.region(axes, plane)
-    entries += layers.draw_marks(axes, plane, points)
+    entries, contours = layers.region(axes, plane)
     edges = layers.edges(axes, plane)
-    layers.name_areas(axes, plane)
-    layers.tag_edges(axes, edges)
-    entries.append(style.Entry("Requirements: edge, and tint where it binds"))
-    entries += [_requirement_entry(plane, index, index in edges, areas) for index in range(len(plane.requirements))]
+    clearing = _clearing(axes, plane, points)
+    for index, vertices in edges.items():
+        clearing.take(f"edge {index}", vertices)
+    if nominal is not None and (outline := layers.nominal_outline(axes, plane, nominal)):
+        entries.append(outline[0])
+        clearing.take("nominal", outline[1])
+    entries += layers.draw_marks(axes, plane, points)
+    labels.label_marks(clearing, points)
+    if contours is not None:
+        labels.label_contours(clearing, contours)
+    labels.tag_edges(clearing, edges)
+    labels.name_areas(clearing, plane, ~plane.feasible)
     if not plane.feasible.any():
-        layers.say_empty(axes, plane)
-    return entries + held
+        labels.say_empty(axes, plane)
+    requirements = [_requirement_entry(plane, index, index in edges, areas) for index in range(len(plane.slack))]
+    return [*entries, style.Entry("Edges, and what binds outside"), *requirements, *held]
 
 
 def slack_map(
@@ -114,28 +125,32 @@ def slack_sheet(
     figure = style.new_figure(plane.title, _subtitle(plane, f"Slack of each requirement over {plane.box}"), plane.provenance)
     count = len(plane.requirements)
     columns = int(np.ceil(np.sqrt(count)))
-    rows = int(np.ceil(count / columns))
-    left, bottom, width, height = _SHEET
-    for index, requirement in enumerate(plane.requirements):
-        row, column = divmod(index, columns)
-        place = (
-            left + width * (column / columns + 0.006),
-            bottom + height * ((rows - 1 - row) / rows),
-            width / columns * 0.90,
-            height / rows * (1 - 0.19 * rows / 2),
-        )
-        axes = style.new_axes(figure, place)
-        layers.prepare(axes, plane, most=6 if columns < 3 else 4)
-        layers.signed_field(axes, plane, plane.slack[index])
-        layers.zero_line(axes, plane, plane.least, colors="white", linewidths=3.4)
-        layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=1.6)
-        axes.set_title(f"{index + 1}  {_once(requirement)}", loc="left", size=11, color=style.INK, parse_math=False)
-        if column:
-            axes.set_ylabel("")
-        if row < (count - 1 - column) // columns:
-            axes.set_xlabel("")
-    _slack_bar(figure, (left + width + 0.025, bottom, 0.014, height - 0.05))
+    for index in range(count):
+        _panel(figure, plane, index, columns)
+    _slack_bar(figure, (0.885, _SHEET[0], 0.014, _SHEET[1] - _SHEET[0]))
     return figure
+
+
+def _panel(figure: Figure, plane: Plane, index: int, columns: int) -> None:
+    """One requirement's slack; only the outer panels carry the axes' names."""
+    count = len(plane.requirements)
+    rows = -(-count // columns)
+    row, column = divmod(index, columns)
+    bottom, top = _SHEET
+    across, down = 0.82 / columns, (top - bottom + 0.075) / rows
+    place = (style.LEFT + across * column, top - down * row - (down - 0.075), across - 0.045, down - 0.075)
+    axes = style.new_axes(figure, place)
+    layers.prepare(axes, plane, most=7 if columns < 3 else 5)
+    layers.known_ground(axes, plane)
+    layers.signed_field(axes, plane, plane.slack[index])
+    layers.zero_line(axes, plane, plane.least, colors="white", linewidths=3.6)
+    layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=1.6)
+    title = textwrap.shorten(f"{index + 1}  {_once(plane.requirements[index])}", 112 // columns, placeholder=" …")
+    axes.set_title(title, loc="left", size=11, color=style.INK, parse_math=False)
+    if column:
+        axes.set_ylabel("")
+    if index + columns < count:
+        axes.set_xlabel("")
 
 
 def _field_map(plane: Plane, field: Floats, heading: str, points: Mapping[str, Mark]) -> Figure:
@@ -148,6 +163,7 @@ def _field_map(plane: Plane, field: Floats, heading: str, points: Mapping[str, M
         halo = Line2D([], [], color="white", linewidth=1.6, path_effects=style.halo(style.QUIET_INK, 3.0))
         entries.append(style.Entry("where all requirements hold", (halo,)))
     entries += layers.draw_marks(axes, plane, points) + held
+    labels.label_marks(_clearing(axes, plane, points), points)
     _slack_bar(figure, _BAR)
     style.add_legend(figure, entries, _LEGEND[0], _BAR[1] - 0.06, room=200)
     return figure
@@ -164,9 +180,11 @@ def _binding_map(plane: Plane, points: Mapping[str, Mark]) -> Figure:
     if layers.zero_line(axes, plane, plane.least, colors="white", linewidths=5.0) is not None:
         layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=2.6)
         entries.append(style.Entry("edge of the region", (Line2D([], [], color=style.INK, linewidth=2.6),)))
-        layers.say_inside(axes, plane)
-    layers.name_areas(axes, plane, everywhere=True)
     entries += layers.draw_marks(axes, plane, points) + held
+    clearing = _clearing(axes, plane, points)
+    labels.label_marks(clearing, points)
+    labels.name_region(clearing, plane)
+    labels.name_areas(clearing, plane, np.ones_like(plane.feasible))
     style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
@@ -177,8 +195,9 @@ def _share_map(plane: Plane, share: Floats, points: Mapping[str, Mark]) -> Figur
     figure, axes = _new_map(plane, f"Share of scenarios that meet every requirement, within {plane.box}")
     held = layers.known_ground(axes, plane)
     layers.share_field(axes, plane, share)
-    entries = [style.Entry("every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))]
+    entries = [style.Entry("edge: every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))]
     entries += layers.draw_marks(axes, plane, points) + held
+    labels.label_marks(_clearing(axes, plane, points), points)
     bands = [f"{low:.0%} to {high:.0%}" for low, high in zip(style.SHARE_LEVELS, style.SHARE_LEVELS[1:], strict=False)]
     swatches = [style.swatch(color) for color in style.SHARES]
     shades = [style.Entry(text.replace("%", " %"), artists) for text, artists in zip([*bands, "all"], swatches, strict=True)]
@@ -192,6 +211,21 @@ def _new_map(plane: Plane, heading: str) -> tuple[Figure, Axes]:
     axes = style.new_axes(figure, _MAP)
     layers.prepare(axes, plane)
     return figure, axes
+
+
+def _clearing(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> labels.Clearing:
+    """The free room beside what is unknown, the decision's points and the line of the slowest period."""
+    clearing = labels.Clearing(axes)
+    if plane.unknown.any():
+        row, column = np.nonzero(plane.unknown)
+        clearing.take("unknown", np.column_stack([plane.period.values[column], plane.gain.values[row]]))
+    for kind, mark in points.items():
+        clearing.take(kind, [(mark.period, mark.gain)], half=11 / 72 / clearing.inches)
+    if slowest := points.get("slowest"):
+        bottom, top = axes.get_ylim()
+        line = np.geomspace(bottom, top, 100) if bottom > 0 else np.linspace(bottom, top, 100)
+        clearing.take("slowest line", np.column_stack([np.full(100, slowest.period), line]))
+    return clearing
 
 
 def _subtitle(plane: Plane, heading: str) -> str:
@@ -208,23 +242,24 @@ def _slack_bar(figure: Figure, place: tuple[float, float, float, float]) -> None
     )
     bar.ax.set_yticklabels([style.plain(level).replace("-", "−") for level in style.SLACK_LEVELS], size=11)
     bar.ax.tick_params(length=0, labelcolor=style.INK)
+    bar.minorticks_off()
     bar.ax.axhline(0.0, color=style.INK, linewidth=2.6)
     bar.outline.set_edgecolor(style.FRAME)
     for height, word in ((0.25, "missed"), (0.75, "met")):
-        bar.ax.text(4.4, height, word, transform=bar.ax.transAxes, size=11, color=style.INK, va="center", rotation=90)
+        bar.ax.text(4.0, height, word, transform=bar.ax.transAxes, size=11, color=style.INK, va="center", rotation=90)
 
 
 def _requirement_entry(plane: Plane, index: int, has_edge: bool, areas: set[int]) -> style.Entry:
     text = f"{index + 1}  {plane.requirements[index].full}"
     known = plane.slack[index][~np.isnan(plane.slack[index])]
     if not has_edge and known.size:
-        text += "\n(met everywhere here)" if (known >= 0).all() else "\n(missed everywhere here)"
+        text += "\n    met everywhere here" if (known >= 0).all() else "\n    missed everywhere here"
     artists = layers.area_sample(index) if index in areas else ()
     return style.Entry(text, (*artists, *layers.edge_sample(index)))
 
 
 def _once(requirement: Requirement) -> str:
-    return requirement.full.replace("\n", ": ")
+    return requirement.full.replace("\n    ", ": ")
 
 
 def _is_line(plane: Plane) -> bool:

@@ -36,15 +36,16 @@ class Axis:
 
 @dataclass(frozen=True)
 class Requirement:
-    """A requirement in words: its name, and what it asks, "damping ratio ≥ 0.6"."""
+    """A requirement in words: its name, its measure, and what it asks, "damping ratio ≥ 0.6"."""
 
     name: str
+    kind: str
     asks: str
 
     @property
     def full(self) -> str:
-        """Name and what it asks, in one line where they start alike."""
-        return self.asks if self.asks.startswith(self.name) else f"{self.name}\n{self.asks}"
+        """Name and what it asks, said once where they start alike."""
+        return self.asks if self.asks.startswith(self.name) else f"{self.name}\n    {self.asks}"
 
 
 @dataclass(frozen=True)
@@ -159,7 +160,7 @@ def marks(plane: Plane, decision: Mapping[str, Any] | None) -> dict[str, Mark]:
     if decision and math.isclose(float(decided["tolerance_scale"]), plane.tolerance_scale, abs_tol=1e-12):
         best, slowest = decided.get("recommended"), decided.get("slowest_period")
         if best and _same_design(plane, best):
-            found["recommended"] = _mark(plane, best, f"least slack {_number(best['least_slack'])}, {best['binding']}")
+            found["recommended"] = _mark(plane, best, f"least slack {_number(best['least_slack'])} ({best['binding']})")
         if slowest and _same_design(plane, slowest):
             found["slowest"] = _slowest(plane, slowest)
     if not plane.feasible.any() and (place := plane.nearest()):
@@ -249,7 +250,7 @@ def _requirements(cut: xr.Dataset) -> tuple[Requirement, ...]:
         kind, unit = str(cut["measure_kind"].values[index]), str(cut["measure_unit"].values[index])
         limit = np.asarray(cut["limit"][index], dtype=float)
         sense = _SENSES[str(np.ravel(cut["sense"])[index])]
-        rows.append(Requirement(name, _asks(kind, sense, limit, unit, np.asarray(cut["period"], dtype=float))))
+        rows.append(Requirement(name, kind, _asks(kind, sense, limit, unit, np.asarray(cut["period"], dtype=float))))
     return tuple(rows)
 
 

@@ -33,6 +33,7 @@ OUTSIDE = "#eceae6"
 UNKNOWN = "#4c5057"
 UNKNOWN_HATCH = "#d9dce0"
 HATCH_WIDTH = 0.6
+LEFT = 0.075  # where titles and axes start, as a share of the width
 
 # Slack in bands: the same colour means the same slack in every picture. CIE lightness falls on both sides of zero,
 # 97 to 79 where missed, 74 to 24 where met, so every met band is darker than every missed one.
@@ -40,7 +41,7 @@ SLACK_LEVELS = (-1.0, -0.5, -0.2, -0.1, -0.05, 0.0, 0.05, 0.1, 0.2, 0.5, 1.0)
 MISSED = ("#f3b883", "#f4c597", "#f4d1ac", "#f5ddc2", "#f6e9d8", "#fbf6ef")  # most missed first
 MET = ("#8abfc3", "#64a5b1", "#438a9b", "#2c6f84", "#1e546b", "#143a4f")  # just met first
 SHARE_LEVELS = (0.0, 0.25, 0.5, 0.75, 0.9, 0.99, 1.0)
-SHARES = ("#fbf6ef", "#f5ddc2", "#f4c597", "#e2b38c", "#b9aea3", "#86a9b0", "#1e546b")  # the last: every scenario
+SHARES = ("#fbf6ef", "#ede5d4", "#d3d3bc", "#a8c1b3", "#84aba7", "#579297", "#1e546b")  # the last: every scenario
 
 FORMATS = ("png", "svg", "pdf")
 _METADATA: dict[str, dict[str, None]] = {
@@ -63,7 +64,7 @@ class Stroke:
 
 _LINES = ("#00507f", "#9c4022", "#6b3f77", "#5d5500", "#1e5b34", "#8f2f4f", "#334e8a", "#4a4a4a")
 _TINTS = ("#ddedfb", "#efd8d2", "#f4e7f6", "#e1ddcc", "#e2f1e5", "#f3d6de", "#e7eafb", "#dcdcdc")
-_HATCHES = ("/", ".", "\\", "-", "+", "|", "o", "//")
+_HATCHES = ("/", ".", "|", "\\", "o", "-", "+", "//")
 _DASHES = ("solid", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 2, 1.5, 2)), (0, (10, 3)), (0, (4, 1.5, 1, 1.5, 1, 1.5)))
 _MARKERS = ("o", "s", "^", "D", "v", "p", "h")
 
@@ -154,9 +155,9 @@ def new_figure(title: str, subtitle: str, provenance: str) -> Figure:
     """A page for a meeting, 13.33 × 7.5 inches: title and subtitle above, where the numbers come from below."""
     figure = Figure(figsize=(13.333, 7.5), dpi=150, facecolor="white")
     lines = (
-        (0.062, 0.955, textwrap.shorten(title, 78, placeholder=" …"), 20, "bold", INK),
-        (0.062, 0.905, textwrap.shorten(subtitle, 128, placeholder=" …"), 13, "normal", QUIET_INK),
-        (0.062, 0.025, provenance, 10, "normal", QUIET_INK),
+        (LEFT, 0.955, textwrap.shorten(title, 78, placeholder=" …"), 20, "bold", INK),
+        (LEFT, 0.905, textwrap.shorten(subtitle, 128, placeholder=" …"), 13, "normal", QUIET_INK),
+        (LEFT, 0.025, provenance, 10, "normal", QUIET_INK),
     )
     for x, y, text, size, weight, color in lines:
         figure.text(x, y, text, size=size, weight=weight, color=color, va="center", parse_math=False)

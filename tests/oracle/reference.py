@@ -1,11 +1,11 @@
 """Slow, plain answer to one sampled loop at 40 digits: exact decimals in, poles and pole measures out.
 
-Neighbours: loops.py holds the loops, test_oracle.py compares the program with this answer. Nothing here shares
-code or method with the program: coefficients stay in z, every sum is carried with so many digits that
+Neighbours: loops.py holds the loops, test_oracle.py compares the program with this answer. Nothing here
+shares code or method with the program: coefficients stay in z, every sum is carried with so many digits that
 cancellation does not matter.
 
-Polynomials are lists of mpf in descending powers. A coefficient may be given as a decimal text ("0.1" then means
-exactly one tenth), an int, a float (its exact binary value) or an mpf.
+Polynomials are lists of mpf in descending powers. A coefficient may be given as a decimal text ("0.1" then
+means exactly one tenth), an int, a float (its exact binary value) or an mpf.
 """
 
 from dataclasses import dataclass
@@ -130,7 +130,7 @@ def held(a, b, duration):
 
 @exactly
 def resolvent(phi):
-    """det(zI - phi) and the matrices of adj(zI - phi), descending powers (Faddeev and Leverrier's recursion)."""
+    """det(zI - phi) and the matrices of adj(zI - phi), descending powers (Faddeev-Leverrier recursion)."""
     order = phi.rows
     coefficients, adjugate = [mp.one], [mp.eye(order)]
     for k in range(1, order + 1):
@@ -145,7 +145,7 @@ def split_delay(dead_time, period):
     """Whole samples d and remainder m of a dead time: dead_time = d*period - m with 0 <= m < period."""
     ratio = number(dead_time) / number(period)
     nearest = mp.nint(ratio)
-    if abs(ratio - nearest) < mp.mpf(10) ** -DIGITS:  # decimals that divide evenly, but for the last digits kept
+    if abs(ratio - nearest) < mp.mpf(10) ** -DIGITS:  # decimals that divide evenly but for rounding
         return int(nearest), mp.zero
     whole = int(mp.ceil(ratio))
     return whole, whole * number(period) - number(dead_time)
@@ -155,8 +155,8 @@ def split_delay(dead_time, period):
 def sample(numerator, denominator, dead_time, period):
     """Zero-order-hold equivalent of numerator(s)/denominator(s) e^(-dead_time s).
 
-    With dead_time = d T - m the plant's input over one period is first the sample of d periods ago, for T - m, then
-    the one of d - 1 periods ago, for m:
+    With dead_time = d T - m the plant's input over one period is the sample of d periods ago for T - m, then
+    the one of d - 1 periods ago for m:
         x[k+1] = phi x[k] + older u[k-d] + newer u[k-d+1],   y[k] = C x[k] + D u[k-d]
     (K. J. Astrom, B. Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, section 2.3, from memory).
     """
@@ -205,7 +205,10 @@ def backward_difference(numerator, denominator, period):
 
 @exactly
 def bilinear(numerator, denominator, period, exact_at=None):
-    """Compensator in s read at s = c (z - 1)/(z + 1): c = 2/T, or w/tan(w T/2) to be exact at w = 2 pi exact_at."""
+    """Compensator in s read at s = c (z - 1)/(z + 1), c = 2/T.
+
+    To be exact at w = 2 pi exact_at, c = w/tan(w T/2): then z = e^(jwT) stands for s = jw.
+    """
     numerator, denominator = polynomial(numerator), polynomial(denominator)
     degree = max(len(numerator), len(denominator)) - 1
     scale = 2 / number(period)
@@ -220,8 +223,8 @@ def bilinear(numerator, denominator, period, exact_at=None):
 def matched(numerator, denominator, period):
     """Matched poles and zeros: s_i -> e^(s_i T), every zero at infinity -> -1, gain matched as s -> 0.
 
-    Near s = 0 the factor s of a pole or zero at the origin is (z - 1)/T: C(s) ~ level s^(zeros - poles) on one side,
-    gain (T s)^(zeros - poles) top(1)/bottom(1) on the other.
+    Near s = 0 the factor s of a pole or zero at the origin is (z - 1)/T: C(s) ~ level s^(zeros - poles) on
+    one side, gain (T s)^(zeros - poles) top(1)/bottom(1) on the other.
     """
     period = number(period)
     upper, zeros = without_origins(polynomial(numerator))
@@ -295,7 +298,7 @@ def continuous(z, period):
 
 
 def is_real(z):
-    """Whether a pole is real: a multiple one leaves the root finder as a ring no wider than its last digits."""
+    """Whether a pole is real: a multiple one leaves the root finder as a ring of its last digits."""
     return abs(mp.im(z)) <= abs(z - 1) * mp.mpf(10) ** -20
 
 
@@ -306,7 +309,10 @@ def damping_ratio(s):
 
 @exactly
 def measures(poles, period, band="0.02"):
-    """Every measure that the closed-loop poles z decide; times in s, frequencies in rad/s, overshoot in percent."""
+    """Every measure that the closed-loop poles z decide: times in s, frequencies in rad/s, overshoot in %.
+
+    Nothing is special about an unstable loop, except that it never settles (+inf).
+    """
     radius = max(abs(z) for z in poles)
     all_s = [continuous(z, period) for z in poles]
     decay = mp.inf if radius == 0 else -mp.log(radius) / number(period)

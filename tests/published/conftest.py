@@ -45,7 +45,7 @@ def study_text(
     basis="poles",
     option="",
 ):
-    """The study of one exact plant under unity feedback; a plant given in z states `sampled_at`, no period."""
+    """One exact plant under unity feedback as a study; a plant in z states `sampled_at` and no period."""
     lines = ['title = "published loop"', "[plant]", f'transfer = "{transfer}"']
     lines += [f'dead_time = "{dead_time}"'] if dead_time else []
     lines += [f'sampled_at = "{sampled_at}"'] if sampled_at else []
@@ -65,7 +65,7 @@ def study_text(
 
 @pytest.fixture(scope="session")
 def measured():
-    """measured(transfer, measures, **loop): the nominal values, {measure: array (period, gain)}, SI units and %."""
+    """measured(transfer, measures, **loop): nominal values as {measure: array (period, gain)}, SI and %."""
 
     def values(transfer, measures, **loop):
         text = study_text(transfer, measures, **loop)
@@ -77,7 +77,7 @@ def measured():
 
 @pytest.fixture(scope="session")
 def judged_stable():
-    """judged_stable(transfer, **loop): the verdict on stability alone, bool array (gain,) at the first period."""
+    """judged_stable(transfer, **loop): the verdict on stability alone, bool (gain,), at the first period."""
 
     def verdict(transfer, **loop):
         text = study_text(transfer, ["stability"], **loop)

@@ -5,17 +5,18 @@ import pytest
 
 import explorer
 
-# Bose, Jury and Zeheb, On robust Hurwitz and Schur polynomials, IEEE Transactions on Automatic Control 33, 1988,
-# as quoted in Bhattacharyya, Chapellat and Keel, Robust Control: The Parametric Approach, 1995, from memory:
-# z^4 + a z^3 + (3/2)z^2 - 1/3 with a in [-17/8, 17/8] is stable at both ends and unstable at a = 0. The
-# general finding, that Kharitonov's four polynomials do not decide stability in z: Bose and Zeheb, Kharitonov's
-# theorem and stability test of multidimensional digital filters, IEE Proceedings G 133, 1986; Hollot and
-# Bartlett, Some discrete-time counterparts to Kharitonov's stability criterion for uncertain systems, IEEE
-# Transactions on Automatic Control 31, 1986; from memory.
+# Bose, Jury and Zeheb, On robust Hurwitz and Schur polynomials, IEEE Transactions on Automatic Control 33,
+# 1988, as quoted in Bhattacharyya, Chapellat and Keel, Robust Control: The Parametric Approach, 1995, from
+# memory: z^4 + a z^3 + (3/2)z^2 - 1/3 with a in [-17/8, 17/8] is stable at both ends and unstable at a = 0.
+# The general finding, that Kharitonov's four polynomials do not decide stability in z: Bose and Zeheb,
+# Kharitonov's theorem and stability test of multidimensional digital filters, IEE Proceedings G 133, 1986;
+# Hollot and Bartlett, Some discrete-time counterparts to Kharitonov's stability criterion for uncertain
+# systems, IEEE Transactions on Automatic Control 31, 1986; from memory.
 END = 17 / 8
 
-# On the circle, z = exp(jv): a = -(z + (3/2)/z - (1/3)/z^3) must be real. Its imaginary part vanishes at sin v = 0,
-# that is a = 13/6 at z = -1, and at sin(v)^2 = 3/8, that is |a| = (8/3) sqrt(5/8). Stable just between the two.
+# On the circle, z = exp(jv): a = -(z + (3/2)/z - (1/3)/z^3) must be real. Its imaginary part vanishes at sin
+# v = 0, that is a = 13/6 at z = -1, and at sin(v)^2 = 3/8, that is |a| = (8/3) sqrt(5/8). Stable just between
+# the two.
 LOWER, UPPER = 8 / 3 * np.sqrt(5 / 8), 13 / 6
 
 # At a = 0, z^2 = -3/4 - sqrt(9/16 + 1/3).
@@ -72,7 +73,8 @@ def test_interior_scenarios_find_the_instability():
 
 
 def test_share_of_stable_plants():
-    # The stable part of the range is 2(END - LOWER)/(2 END) = 0.8 %, so 64 even draws hold none or a few of it.
+    # The stable part of the range is 2(END - LOWER)/(2 END) = 0.8 %, so 64 even draws hold none or a few of
+    # it.
     dataset = swept(nominal=END, interior=64, corners="false")
     assert dataset["share_met"].item() < 4 / 64
 
@@ -86,7 +88,8 @@ def test_nominal_plant_in_the_middle_is_unstable():
 
 def test_the_coefficient_as_a_gain_has_a_window(measured, judged_stable):
     """The same family as a gain axis: conditionally stable, with both edges in closed form."""
-    gains = [0.01, LOWER * (1 - 1e-6), LOWER, LOWER * (1 + 1e-6), END, UPPER * (1 - 1e-6), UPPER, UPPER * (1 + 1e-6)]
+    below, above = 1 - 1e-6, 1 + 1e-6
+    gains = [0.01, LOWER * below, LOWER, LOWER * above, END, UPPER * below, UPPER, UPPER * above]
     loop = {"gain": gains, "sampled_at": "1 sample"}
     transfer = "z^3/(z^4 + 1.5*z^2 - 1/3)"
     radii = measured(transfer, ["stability"], **loop)["stability"][0]

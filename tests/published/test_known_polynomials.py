@@ -1,22 +1,24 @@
-"""Polynomials in z from the literature on stability tests: the program's verdict and poles against known roots."""
+"""Polynomials from the literature on stability tests in z: verdict and poles against their known roots."""
 
 import numpy as np
 import pytest
 
-# Simple roots come out as promised, 1e-9 in s. A double root moves by the square root of rounding, 1e-8 and less.
+# Simple roots come out as promised, 1e-9 in s. A double root moves by the square root of rounding, 1e-8 and
+# less.
 SIMPLE, DOUBLE = 1e-9, 1e-7
 
 
 def closed_loop_of(polynomial):
     """A plant in z that unity feedback at gain 1 closes with just this monic polynomial: (P(z) - z^n)/z^n."""
     degree = len(polynomial) - 1
-    terms = [f"({value!r})*z^{degree - place}" for place, value in enumerate(polynomial) if place > 0]
+    terms = [f"({value:.17g})*z^{degree - place}" for place, value in enumerate(polynomial) if place > 0]
     return f"({' + '.join(terms)})/z^{degree}"
 
 
 # (coefficients, roots, tolerance); each set of roots was multiplied out again.
 STABLE = {
-    # Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 4-3, first example on the Jury test, from memory.
+    # Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 4-3, first example on the Jury test, from
+    # memory.
     "Ogata, degree 4": ([1, -1.2, 0.07, 0.3, -0.08], [0.8, 0.5, 0.4, -0.5], SIMPLE),
     # Phillips and Nagle, Digital Control System Analysis and Design, example on the Jury test, from memory.
     "Phillips and Nagle": ([1, -1.8, 1.05, -0.2], [0.8, 0.5, 0.5], DOUBLE),
@@ -49,16 +51,16 @@ def test_verdict_on_stability(judged_stable, name):
 
 
 def test_root_on_the_circle(measured):
-    # Ogata 1995, section 4-3, second example, from memory: z^3 - 1.1z^2 - 0.1z + 0.2 is critically stable, with
-    # the roots 1, 0.5, -0.4.
+    # Ogata 1995, section 4-3, second example, from memory: z^3 - 1.1z^2 - 0.1z + 0.2 is critically stable,
+    # with the roots 1, 0.5, -0.4.
     values = measured(closed_loop_of([1, -1.1, -0.1, 0.2]), ["spectral radius"], sampled_at="1 sample")
     assert values["spectral radius"][0, 0] == pytest.approx(1, rel=SIMPLE)
 
 
 def test_two_roots_outside(measured):
     # Kuo, Automatic Control Systems, example on the bilinear transformation, from memory:
-    # z^3 + 5.94z^2 + 7.7z - 0.368 has two roots outside the circle. Outside means |root| >= 1: their product is
-    # 0.368 over the small root 0.046137 (by one Newton step from 0.368/7.7), their sum -5.94 less it.
+    # z^3 + 5.94z^2 + 7.7z - 0.368 has two roots outside the circle. Their product is 0.368 over the small
+    # root 0.046137 (found by Newton steps from 0.368/7.7), their sum -5.94 less that root.
     small = 0.368 / 7.7
     for _ in range(4):
         small -= (small**3 + 5.94 * small**2 + 7.7 * small - 0.368) / (3 * small**2 + 11.88 * small + 7.7)
@@ -74,8 +76,8 @@ def test_two_roots_outside(measured):
 
 
 def test_gain_range_of_a_cubic(judged_stable):
-    # Kuo, Automatic Control Systems, exercise on the bilinear transformation, from memory: z^3 + z^2 + z + K is
-    # stable for 0 < K < 1 (at K = 1 it is (z + 1)(z^2 + 1), at K = 0 it is z(z^2 + z + 1)).
+    # Kuo, Automatic Control Systems, exercise on the bilinear transformation, from memory: z^3 + z^2 + z + K
+    # is stable for 0 < K < 1 (at K = 1 it is (z + 1)(z^2 + 1), at K = 0 it is z(z^2 + z + 1)).
     verdict = judged_stable("1/(z^3 + z^2 + z)", gain=[1e-3, 0.4, 0.999, 1.001, 3], sampled_at="1 sample")
     assert verdict.tolist() == [True, True, True, False, False]
 
@@ -85,11 +87,13 @@ def test_cubic_with_all_roots_on_the_circle(measured):
     assert values["spectral radius"][0, 0] == pytest.approx(1, rel=SIMPLE)
 
 
-@pytest.mark.parametrize("corner", [(0, -0.98), (1.98, 0.99), (-1.98, 0.99), (0, 0.99), (1, 0.01), (-1, 0.01)])
+@pytest.mark.parametrize(
+    "corner", [(0, -0.98), (1.98, 0.99), (-1.98, 0.99), (0, 0.99), (1, 0.01), (-1, 0.01)]
+)
 def test_triangle_of_stable_quadratics(judged_stable, corner):
-    # Astrom and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, section 3.2, from memory: z^2 + az + b is
-    # stable just for b < 1, b > a - 1, b > -a - 1. Each point here lies inside, near an edge or a vertex; a
-    # step of 0.04 away from the middle (0, 1/3) of the triangle leaves it.
+    # Åström and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, section 3.2, from memory: z^2 + az + b
+    # is stable just for b < 1, b > a - 1, b > -a - 1. Each point here lies inside, near an edge or a vertex;
+    # a step of 0.04 away from the middle (0, 1/3) of the triangle leaves it.
     inside = np.array(corner)
     outward = inside - np.array([0, 1 / 3])
     outside = inside + 0.04 * outward / np.linalg.norm(outward)
@@ -101,8 +105,8 @@ def test_triangle_of_stable_quadratics(judged_stable, corner):
 
 @pytest.mark.parametrize("degree", [1, 2, 5, 9])
 def test_rotated_roots_of_a_power(measured, degree):
-    # z^n + K has n roots of modulus K^(1/n); K = 1 is the classical limit of Jury, Theory and Application of the
-    # z-Transform Method, 1964 (the last coefficient must be smaller than the first), from memory.
+    # z^n + K has n roots of modulus K^(1/n); K = 1 is the classical limit of Jury, Theory and Application of
+    # the z-Transform Method, 1964 (the last coefficient must be smaller than the first), from memory.
     gains = np.array([0.5, 1.0, 1.2])
     values = measured(f"1/z^{degree}", ["spectral radius"], gain=gains, sampled_at="1 sample")
     assert values["spectral radius"][0] == pytest.approx(gains ** (1 / degree), rel=SIMPLE)

@@ -17,10 +17,11 @@ def values_of(measured, transfer, names, strength, **loop):
 @pytest.mark.parametrize("late", [0, 1, 2])
 @pytest.mark.parametrize("strength", [0.1, 0.4, 0.6])
 def test_integrator_late_by_whole_samples(measured, late, strength):
-    # |k/(exp(jx) - 1)| = 1 at 2 sin(x/2) = k, where the phase is -(90 deg + x/2 + late x); no source. Half a period of
-    # the hold and the computing delay make the phase lost: Franklin, Powell and Workman, Digital Control of
-    # Dynamic Systems, from memory. The gain margin leads to the limit of Levin and May, A note on difference-delay
-    # equations, Theoretical Population Biology 9, 1976, from memory: 2 cos(n pi/(2n + 1)), n samples late.
+    # |k/(exp(jx) - 1)| = 1 at 2 sin(x/2) = k, where the phase is -(90 deg + x/2 + late x); no source. Half a
+    # period of the hold and the computing delay make the phase lost: Franklin, Powell and Workman, Digital
+    # Control of Dynamic Systems, from memory. The gain margin leads to the limit of Levin and May, A note on
+    # difference-delay equations, Theoretical Population Biology 9, 1976, from memory: 2 cos(n pi/(2n + 1)), n
+    # samples late.
     names = ["crossover frequency", "phase margin", "delay margin", "gain margin", "phase lost to sampling"]
     delay = {"computing_delay": f"{late} period"} if late else {}
     values = values_of(measured, "1/s", names, strength, **delay)
@@ -35,7 +36,8 @@ def test_integrator_late_by_whole_samples(measured, late, strength):
 
 
 def test_delay_margin_of_one_sample_at_the_limit_for_one_sample_late(measured):
-    # k = 1 is the Levin-May limit for one sample late; without delay it has a margin of just that sample and 60 deg.
+    # k = 1 is the Levin-May limit for one sample late; without delay it has a margin of just that sample and
+    # 60 deg.
     values = values_of(measured, "1/s", ["delay margin", "phase margin"], 1.0)
     assert values["delay margin"] == pytest.approx(PERIOD, rel=AGREEMENT)
     assert values["phase margin"] == pytest.approx(60, rel=AGREEMENT)
@@ -43,8 +45,8 @@ def test_delay_margin_of_one_sample_at_the_limit_for_one_sample_late(measured):
 
 @pytest.mark.parametrize("strength", [0.3, 1.0, 1.6])
 def test_distance_and_peaks_of_the_integrator(measured, strength):
-    # With q = 1 - k: |1 + L| = |z - q|/|z - 1| falls monotonically to 1 - k/2 at z = -1; |L/(1 + L)| = k/|z - q| is
-    # largest at z = 1 (where it is 1) for k < 1, at z = -1 (k/(2 - k)) for k > 1; no source.
+    # With q = 1 - k: |1 + L| = |z - q|/|z - 1| falls monotonically to 1 - k/2 at z = -1; |L/(1 + L)| = k/|z -
+    # q| is largest at z = 1 (where it is 1) for k < 1, at z = -1 (k/(2 - k)) for k > 1; no source.
     values = values_of(measured, "1/s", ["modulus margin", "resonance peak"], strength)
     assert values["modulus margin"] == pytest.approx(1 - strength / 2, rel=AGREEMENT)
     assert values["resonance peak"] == pytest.approx(max(1, strength / (2 - strength)), rel=AGREEMENT)
@@ -61,40 +63,43 @@ def test_bandwidth_of_the_integrator(measured, strength):
 
 @pytest.mark.parametrize("strength", [0.2, 1.0, 1.7])
 def test_noise_gain_of_the_integrator(measured, strength):
-    # Astrom, Introduction to Stochastic Control Theory, 1970, section 5.2, table of the integral I_1, from memory:
-    # (b0 z + b1)/(a0 z + a1) passes the variance ((b0^2 + b1^2)a0 - 2 b0 b1 a1)/(a0(a0^2 - a1^2)); with
-    # K(z - 1)/(z - 1 + k) that is 2K^2/(2 - k).
+    # Åström, Introduction to Stochastic Control Theory, 1970, section 5.2, table of the integral I_1, from
+    # memory: (b0 z + b1)/(a0 z + a1) passes the variance ((b0^2 + b1^2)a0 - 2 b0 b1 a1)/(a0(a0^2 - a1^2));
+    # with K(z - 1)/(z - 1 + k) that is 2K^2/(2 - k).
     values = values_of(measured, "1/s", ["noise gain"], strength)
     assert values["noise gain"] == pytest.approx(strength / PERIOD * sqrt(2 / (2 - strength)), rel=AGREEMENT)
 
 
 @pytest.mark.parametrize("gain", [0.2, 1.0, 2.2])
 def test_noise_gain_of_the_sampled_motor(measured, gain):
-    # The same table's I_2, from memory; the controller's output is -K(z - 1)(z - e)/(z^2 + a1 z + a2) of the noise.
+    # The same table's I_2, from memory; the controller's output is -K(z - 1)(z - e)/(z^2 + a1 z + a2) of the
+    # noise.
     e = exp(-1)
     b0, b1, b2 = gain, -gain * (1 + e), gain * e
     a0, a1, a2 = 1, gain * e - 1 - e, e + gain * (1 - 2 * e)
     e1 = a0 + a2
-    square = (b0**2 + b1**2 + b2**2) * a0 * e1 - 2 * (b0 * b1 + b1 * b2) * a0 * a1 + 2 * b0 * b2 * (a1**2 - a2 * e1)
-    variance = square / a0 / ((a0**2 - a2**2) * e1 - (a0 * a1 - a1 * a2) * a1)
+    squares, neighbours, ends = b0**2 + b1**2 + b2**2, 2 * (b0 * b1 + b1 * b2), 2 * b0 * b2
+    total = squares * a0 * e1 - neighbours * a0 * a1 + ends * (a1**2 - a2 * e1)
+    variance = total / a0 / ((a0**2 - a2**2) * e1 - (a0 * a1 - a1 * a2) * a1)
     values = measured("1/(s*(s + 1))", ["noise gain"], gain=[gain])
     assert values["noise gain"][0, 0] == pytest.approx(sqrt(variance), rel=AGREEMENT)
 
 
 @pytest.mark.parametrize(("gain", "margin"), [(1.0, 2.3922), (0.5, 4.7844)])
 def test_gain_margin_of_the_sampled_motor(measured, gain, margin):
-    # Critical gain (1 - e)/(1 - 2e) = 2.3922 at T = 1 s; Ogata, Discrete-Time Control Systems, 2nd ed. 1995, prints
-    # 2.3925 (section 4-3, rounded coefficients), from memory.
+    # Critical gain (1 - e)/(1 - 2e) = 2.3922 at T = 1 s; Ogata, Discrete-Time Control Systems, 2nd ed. 1995,
+    # prints 2.3925 (section 4-3, rounded coefficients), from memory.
     values = measured("1/(s*(s + 1))", ["gain margin", "gain reduction margin"], gain=[gain])
     assert values["gain margin"][0, 0] == pytest.approx(margin, rel=5e-5)
-    assert values["gain margin"][0, 0] == pytest.approx((1 - exp(-1)) / (1 - 2 * exp(-1)) / gain, rel=AGREEMENT)
+    exact = (1 - exp(-1)) / (1 - 2 * exp(-1)) / gain
+    assert values["gain margin"][0, 0] == pytest.approx(exact, rel=AGREEMENT)
     assert values["gain reduction margin"][0, 0] == 0  # stable down to no gain at all
 
 
 @pytest.mark.parametrize("gain", [0.5, 1.0])
 def test_fast_sampled_motor_has_the_analogue_margins(measured, gain):
-    # K/(s(s + 1)) crosses at w^2 = (sqrt(1 + 4K^2) - 1)/2 with the phase -90 deg - arctan w; no source. The hold takes
-    # w T/2 of it, to within (wT)^2 = 1e-6.
+    # K/(s(s + 1)) crosses at w^2 = (sqrt(1 + 4K^2) - 1)/2 with the phase -90 deg - arctan w; no source. The
+    # hold takes w T/2 of it, to within (wT)^2 = 1e-6.
     period = 1e-3
     w = sqrt((sqrt(1 + 4 * gain**2) - 1) / 2)
     lost = w * period / 2

@@ -1,4 +1,4 @@
-"""Pulse transfer functions behind a zero-order hold: closed-loop poles against the printed z-transform tables."""
+"""Zero-order hold: closed-loop poles against the printed tables of pulse transfer functions."""
 
 import numpy as np
 import pytest
@@ -86,10 +86,10 @@ def differentiated_oscillator(h):
     return np.array([1, -1]) * sin(A * h) / A, [1, -2 * cos(A * h), 1]
 
 
-# Astrom and Wittenmark, Computer-Controlled Systems: Theory and Design, 3rd ed. 1997, table 2.1 "zero-order-hold
-# sampling of a continuous-time system", from memory; every row was checked against an exponential of the
-# augmented state matrix. (1/s^3 is the table's 1/s^m at m = 3; its second coefficient in a/(s^2(s + a)) carries
-# 2/a^2.)
+# Åström and Wittenmark, Computer-Controlled Systems: Theory and Design, 3rd ed. 1997, table 2.1
+# "zero-order-hold sampling of a continuous-time system", from memory; every row was checked against an
+# exponential of the augmented state matrix. (1/s^3 is the table's 1/s^m at m = 3; its second coefficient in
+# a/(s^2(s + a)) carries 2/a^2.)
 TABLE = {
     "1/s": integrator,
     "1/s^2": double_integrator,
@@ -109,7 +109,7 @@ TABLE = {
 
 
 def pole_measures(numerator, denominator, gain, period):
-    """Radius, least damping ratio and least natural frequency of denominator + gain*numerator = 0 [1, 1, rad/s]."""
+    """Radius, least damping ratio, least |s| of denominator + gain*numerator = 0 [1, 1, rad/s]."""
     poles = np.roots(np.polyadd(denominator, gain * np.asarray(numerator))).astype(complex)
     s = np.log(poles) / period
     return abs(poles).max(), (-s.real / abs(s)).min(), abs(s).min()
@@ -146,7 +146,7 @@ def delayed_double_integrator(delay, h):
     ("transfer", "pulse_transfer"), [(f"{A}/(s + {A})", delayed_lag), ("1/s^2", delayed_double_integrator)]
 )
 def test_dead_time_of_part_of_a_sample(measured, transfer, pulse_transfer, whole):
-    # Astrom and Wittenmark 1997, section 2.3 on time delay: first-order system with delay, double integrator
+    # Åström and Wittenmark 1997, section 2.3 on time delay: first-order system with delay, double integrator
     # with delay, from memory. Further whole samples are further factors of z.
     part, h = 0.3, 0.8
 
@@ -160,7 +160,8 @@ def test_dead_time_of_part_of_a_sample(measured, transfer, pulse_transfer, whole
 
 
 def test_dead_time_and_computing_delay_add(measured):
-    # Astrom and Wittenmark 1997, chapter 9 on implementation, from memory: a computing delay counts as dead time.
+    # Åström and Wittenmark 1997, chapter 9 on implementation, from memory: a computing delay counts as dead
+    # time.
     part, h = 0.5, 0.8
     assert_table_entry(
         measured,
@@ -174,8 +175,8 @@ def test_dead_time_and_computing_delay_add(measured):
 
 
 def test_motor_with_printed_coefficients(measured):
-    # Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 3-5, from memory: 1/(s(s + 1)) behind a hold at
-    # T = 1 is (0.3679z + 0.2642)/((z - 0.3679)(z - 1)), and at K = 1 the loop is z^2 - z + 0.6321.
+    # Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 3-5, from memory: 1/(s(s + 1)) behind a hold
+    # at T = 1 is (0.3679z + 0.2642)/((z - 0.3679)(z - 1)), and at K = 1 the loop is z^2 - z + 0.6321.
     values = measured("1/(s*(s + 1))", POLE_MEASURES)
     found = [values[measure][0, 0] for measure in POLE_MEASURES]
     radius = sqrt(0.6321)

@@ -1,4 +1,4 @@
-"""Largest stable gain against the sample period: the program's poles against textbook limits and exact ones."""
+"""Largest stable gain against the sample period: poles against textbook limits and exact ones."""
 
 import numpy as np
 import pytest
@@ -8,16 +8,16 @@ import pytest
 ON_THE_CIRCLE = 3e-9
 
 
-def assert_limit(measured, transfer, limit, **loop):
-    """Just below the limit the largest pole is inside the unit circle, just above outside, at the limit on it."""
+def assert_limit(measured, transfer, limit, closeness=ON_THE_CIRCLE, **loop):
+    """The largest pole is inside the unit circle just below the limit, on it there, outside just above."""
     gains = limit * np.array([1 - 2e-3, 1.0, 1 + 2e-3])
     below, at, above = measured(transfer, ["stability"], gain=gains, **loop)["stability"][0]
     assert below < 1 < above
-    assert at == pytest.approx(1, abs=ON_THE_CIRCLE)
+    assert at == pytest.approx(1, abs=closeness)
 
 
 def motor_limit(period):
-    """K/(s(s + 1)) behind a hold: z^2 + (Ka - 1 - e)z + e + Kb with a = e - 1 + T, b = 1 - (1 + T)e, e = exp(-T).
+    """K/(s(s + 1)) behind a hold: z^2 + (Ka - 1 - e)z + e + Kb, a = e - 1 + T, b = 1 - (1 + T)e, e = exp(-T).
 
     A complex pair leaves the circle when its product e + Kb is 1. (The other condition, a root at -1, comes
     later for every T below 3.7.)
@@ -51,7 +51,8 @@ def test_frequency_of_sustained_oscillation(measured):
     # oscillates at 1.3244 rad/s; T = 1.
     pole = 0.2439 + 0.9698j
     values = measured("1/(s*(s + 1))", ["spectral radius", "natural frequency"], gain=[2.3925])
-    assert values["natural frequency"][0, 0] == pytest.approx(1.3244, abs=1.5e-4)  # four digits, twice rounded
+    # The printed gain and poles come from coefficients of four digits.
+    assert values["natural frequency"][0, 0] == pytest.approx(1.3244, abs=1.5e-4)
     assert values["natural frequency"][0, 0] == pytest.approx(np.angle(pole), abs=1.5e-4)
     assert values["spectral radius"][0, 0] == pytest.approx(abs(pole), abs=1.5e-4)
 
@@ -101,8 +102,9 @@ def test_integrator_limit_is_two_over_the_period(measured):
 @pytest.mark.parametrize("late", [1, 2, 3, 5])
 @pytest.mark.parametrize("where", ["dead_time", "computing_delay", "both"])
 def test_integrator_late_by_whole_samples(measured, late, where):
-    # Levin and May, A note on difference-delay equations, Theoretical Population Biology 9, 1976, from memory:
-    # x(n+1) = x(n) - q x(n-k) is stable just for 0 < q < 2 cos(k pi/(2k + 1)). Here q = KT, k samples late.
+    # Levin and May, A note on difference-delay equations, Theoretical Population Biology 9, 1976, from
+    # memory: x(n+1) = x(n) - q x(n-k) is stable just for 0 < q < 2 cos(k pi/(2k + 1)). Here q = KT, k samples
+    # late.
     period = 0.25
     delays = {
         "dead_time": {"dead_time": f"{late * period} s"},
@@ -115,29 +117,26 @@ def test_integrator_late_by_whole_samples(measured, late, where):
 
 @pytest.mark.parametrize("part", [0.1, 0.25, 0.4, 0.75])
 def test_integrator_late_by_part_of_a_sample(measured, part):
-    # z^2 - z + KT((1 - p)z + p): sampling of a delayed integrator, Astrom and Wittenmark, Computer-Controlled
+    # z^2 - z + KT((1 - p)z + p): sampling of a delayed integrator, Åström and Wittenmark, Computer-Controlled
     # Systems, 3rd ed. 1997, chapter 2, from memory. By the second-order Jury conditions a root reaches -1 at
     # KT = 2/(1 - 2p), a pair leaves the circle at KT = 1/p: a quarter of a sample late allows twice the gain
     # of none. There, at KT = 4, the roots are -1 and -1: a double root moves by the square root of rounding.
     limit = min(1 / part, 2 / (1 - 2 * part) if part < 0.5 else np.inf)
-    loop = {"dead_time": f"{part} s", "period": [1.0]}
-    if part != 0.25:
-        assert_limit(measured, "1/s", limit, **loop)
-    else:
-        at = measured("1/s", ["stability"], gain=[limit * (1 - 2e-3), limit, limit * (1 + 2e-3)], **loop)["stability"][0]
-        assert at[0] < 1 < at[2]
-        assert at[1] == pytest.approx(1, abs=1e-7)
+    closeness = 1e-7 if part == 0.25 else ON_THE_CIRCLE
+    assert_limit(measured, "1/s", limit, closeness, dead_time=f"{part} s", period=[1.0])
 
 
 def test_fast_sampled_dead_time_reaches_the_continuous_limit_with_half_a_period_lost(measured):
-    # Hayes, Roots of the transcendental equation ..., J. London Math. Soc. 25, 1950, from memory: an integrator
-    # with dead time d is stable for 0 < Kd < pi/2. The hold adds half a period, common practice, no source;
-    # by the Levin-May limit 2 sin(pi/(2(2k + 1))) the two agree to (pi/(2(2k + 1)))^2/6 = 1e-4 at k = 60.
+    # Hayes, Roots of the transcendental equation ..., J. London Math. Soc. 25, 1950, from memory: an
+    # integrator with dead time d is stable for 0 < Kd < pi/2. The hold adds half a period, common practice,
+    # no source; by the Levin-May limit 2 sin(pi/(2(2k + 1))) the two agree to (pi/(2(2k + 1)))^2/6 = 1e-4 at
+    # k = 60.
     delay, samples = 0.3, 60
     period = delay / samples
     limit = np.pi / 2 / (delay + period / 2)
     gains = limit * np.array([1 - 3e-4, 1 + 3e-4])
-    below, above = measured("1/s", ["stability"], gain=gains, period=[period], dead_time=f"{delay} s")["stability"][0]
+    values = measured("1/s", ["stability"], gain=gains, period=[period], dead_time=f"{delay} s")
+    below, above = values["stability"][0]
     assert below < 1 < above
 
 
@@ -147,12 +146,14 @@ def test_fast_sampled_dead_time_reaches_the_continuous_limit_with_half_a_period_
         # Ogata, Modern Control Engineering, chapter on PID control, ultimate-gain example, from memory:
         # critical gain 30, critical period 2.8099 s.
         ("1/(s*(s + 1)*(s + 5))", 30.0, 2.8099),
-        # Astrom and Hagglund, PID Controllers, 2nd ed. 1995, from memory: 1/(s + 1)^3 has the critical gain 8 at
-        # the frequency sqrt(3).
+        # Åström and Hägglund, PID Controllers, 2nd ed. 1995, from memory: 1/(s + 1)^3 has the critical gain 8
+        # at the frequency sqrt(3).
         ("1/(s + 1)^3", 8.0, 2 * np.pi / np.sqrt(3)),
     ],
 )
-def test_fast_sampling_reaches_the_continuous_critical_point(measured, transfer, critical_gain, critical_period):
+def test_fast_sampling_reaches_the_continuous_critical_point(
+    measured, transfer, critical_gain, critical_period
+):
     # The hold costs half a period, a phase of w T/2 = 1e-4 rad here: the gain moves by a few times that.
     values = measured(
         transfer,
@@ -176,7 +177,7 @@ def test_pathological_period_hides_the_oscillation(measured, turns):
 
 
 def test_double_integrator_never_stands_proportional_control(measured):
-    # Pulse transfer T^2 (z + 1)/(2(z - 1)^2), Astrom and Wittenmark 1997, table 2.1, from memory: the pair's
+    # Pulse transfer T^2 (z + 1)/(2(z - 1)^2), Åström and Wittenmark 1997, table 2.1, from memory: the pair's
     # product is 1 + K T^2/2.
     gains, period = np.array([0.01, 1.0, 3.0]), 0.5
     values = measured("1/s^2", ["spectral radius"], gain=gains, period=[period])

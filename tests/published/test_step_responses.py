@@ -1,4 +1,4 @@
-"""Step responses worked out in textbooks or by hand, between samples included: deadbeat loops and a sampled motor."""
+"""Step responses, between samples included, from textbooks and by hand: deadbeat loops, a sampled motor."""
 
 import numpy as np
 import pytest
@@ -8,8 +8,8 @@ RESPONSE = 1e-6  # promised for response times; other response values are promis
 VALUE = 1e-9
 
 
-def lengthen(function, low, high):
-    """The argument between low and high at which a monotonic function changes sign, by bisection to rounding."""
+def crossing(function, low, high):
+    """Where a monotonic function changes sign between low and high, by bisection to rounding."""
     rising = function(high) > 0
     for _ in range(80):
         middle = (low + high) / 2
@@ -17,16 +17,18 @@ def lengthen(function, low, high):
     return (low + high) / 2
 
 
-# Deadbeat control of 1/s^2: with k = T^2/2, (z - 1)^2 (z + 3/4) + k(z + 1)(5z - 3)/(4k) = z^3. The rule (all poles
-# at the origin, the state at rest after as many samples as there are poles, effort as 1/T^2) is that of Astrom and
-# Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, sections 4.3 and 5.3, from memory; the numbers follow.
+# Deadbeat control of 1/s^2: with k = T^2/2, (z - 1)^2 (z + 3/4) + k(z + 1)(5z - 3)/(4k) = z^3. The rule (all
+# poles at the origin, the state at rest after as many samples as there are poles, effort as 1/T^2) is that of
+# Åström and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, sections 4.3 and 5.3, from memory; the
+# numbers follow.
 DOUBLE_INTEGRATOR_DEADBEAT = "gain*(2.5*z - 1.5)/(period^2*(z + 0.75))"
 
 
 @pytest.mark.parametrize("period", [0.01, 3.0])
 def test_deadbeat_of_the_double_integrator(measured, period):
-    # u = (5/2, -4, 3/2, 0, ...)/T^2, so y = 5/4, 7/4, 1 at the samples. In the second interval, with x = t/T - 1,
-    # y = 5/4 + (5/2)x - 2x^2 rises to 65/32 at x = 5/8; in the third y - 1 = (3/4)(3 - t/T)^2, 2 % at sqrt(2/75).
+    # u = (5/2, -4, 3/2, 0, ...)/T^2, so y = 5/4, 7/4, 1 at the samples. In the second interval, with x = t/T
+    # - 1, y = 5/4 + (5/2)x - 2x^2 rises to 65/32 at x = 5/8; in the third y - 1 = (3/4)(3 - t/T)^2, 2 % at
+    # sqrt(2/75).
     names = ["overshoot", "excess between samples", "peak effort", "settling time", "time to peak"]
     loop = {"compensator": DOUBLE_INTEGRATOR_DEADBEAT, "period": [period], "basis": "response"}
     values = {name: value[0, 0] for name, value in measured("1/s^2", names, **loop).items()}
@@ -38,7 +40,9 @@ def test_deadbeat_of_the_double_integrator(measured, period):
 
 
 def test_deadbeat_of_the_double_integrator_has_all_poles_at_the_origin(measured):
-    values = measured("1/s^2", ["spectral radius"], compensator=DOUBLE_INTEGRATOR_DEADBEAT, period=[0.01, 3.0])
+    values = measured(
+        "1/s^2", ["spectral radius"], compensator=DOUBLE_INTEGRATOR_DEADBEAT, period=[0.01, 3.0]
+    )
     # A triple pole moves by the cube root of rounding: (1e-15)^(1/3) = 1e-5, tenfold for the sums.
     assert values["spectral radius"][:, 0] == pytest.approx([0, 0], abs=1e-4)
 
@@ -52,11 +56,11 @@ def test_deadbeat_of_a_lag(measured, corner, period):
 
 
 class TestDeadbeatOfTheMotor:
-    """Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 4-7 on the analytical design method, from memory.
+    """Ogata, Discrete-Time Control Systems, 2nd ed. 1995, section 4-7, analytical design, from memory.
 
-    Plant 1/(s(s + 1)), T = 1 s: D(z) = 1.5820(1 - 0.3679/z)/(1 + 0.4180/z) brings the output to rest in two samples
-    without ripple: y = 0, 0.5820, 1, 1, ...; u = 1.5820, -0.5820, 0, .... Exactly, with e = exp(-1): 1/(1 - e) for
-    1.5820, and (1 - 2e)/(1 - e) for 0.4180.
+    Plant 1/(s(s + 1)), T = 1 s: D(z) = 1.5820(1 - 0.3679/z)/(1 + 0.4180/z) brings the output to rest in two
+    samples without ripple: y = 0, 0.5820, 1, 1, ...; u = 1.5820, -0.5820, 0, .... Exactly, with e = exp(-1):
+    1/(1 - e) for 1.5820, and (1 - 2e)/(1 - e) for 0.4180.
     """
 
     compensator = "gain*(z - exp(-1))/((1 - exp(-1))*z + 1 - 2*exp(-1))"
@@ -69,7 +73,14 @@ class TestDeadbeatOfTheMotor:
         assert values["spectral radius"][0, 0] == pytest.approx(0.3679, abs=1e-4)
 
     def test_response_between_samples(self, measured):
-        names = ["overshoot", "excess between samples", "peak effort", "settling time", "time to peak", "rise time"]
+        names = [
+            "overshoot",
+            "excess between samples",
+            "peak effort",
+            "settling time",
+            "time to peak",
+            "rise time",
+        ]
         loop = {"compensator": self.compensator, "basis": "response"}
         values = {name: value[0, 0] for name, value in measured("1/(s*(s + 1))", names, **loop).items()}
         effort = 1 / (1 - exp(-1))
@@ -84,9 +95,9 @@ class TestDeadbeatOfTheMotor:
         def second(t):  # starts at first(1) with the velocity 1
             return first(1) + (1 - exp(-t)) + (1 - effort) * (t - 1 + exp(-t))
 
-        tenth = lengthen(lambda t: first(t) - 0.1, 0, 1)
-        ninetieth = 1 + lengthen(lambda t: second(t) - 0.9, 0, 1)
-        settled = 1 + lengthen(lambda t: second(t) - 0.98, 0, 1)
+        tenth = crossing(lambda t: first(t) - 0.1, 0, 1)
+        ninetieth = 1 + crossing(lambda t: second(t) - 0.9, 0, 1)
+        settled = 1 + crossing(lambda t: second(t) - 0.98, 0, 1)
         assert values["rise time"] == pytest.approx(ninetieth - tenth, rel=RESPONSE)
         assert values["settling time"] == pytest.approx(settled, rel=RESPONSE)
 
@@ -104,13 +115,12 @@ class TestSampledMotorAtUnitGain:
     def test_overshoot_at_the_samples(self, measured):
         overshoot, excess = self.values(measured, "overshoot", "excess between samples")
         assert overshoot - excess == pytest.approx(39.96, abs=6e-3)  # 1.3996
-        # c(3) = c(4) = 1 + (1 - r)(1 - r) ... with r = 1 - e(1) summed by hand: 2 - exp(-1) - r*exp(-1), r = 1 - 1/e.
-        e = exp(-1)
-        assert overshoot - excess == pytest.approx(100 * ((1 - e) * (1 - e) - 0 + 0), rel=VALUE)
+        # From z^2 - z + r, r = 1 - exp(-1): c(3) = c(2) - r c(1) + r = 1 + r^2, as c(1) = 1 - r and c(2) = 1.
+        assert overshoot - excess == pytest.approx(100 * (1 - exp(-1)) ** 2, rel=VALUE)
 
     def test_peak_lies_between_the_third_and_fourth_sample(self, measured):
-        # From y = c(3), velocity v, effort u = 1 - c(3): y + v(1 - exp(-t)) + u(t - 1 + exp(-t)) is largest at
-        # exp(-t) = u/(u - v).
+        # From y = c(3), velocity v, effort u = 1 - c(3): y + v(1 - exp(-t)) + u(t - 1 + exp(-t)) is largest
+        # at exp(-t) = u/(u - v).
         e = exp(-1)
         position, velocity = 0.0, 0.0
         for _ in range(3):
@@ -128,8 +138,8 @@ class TestSampledMotorAtUnitGain:
 
     @pytest.mark.parametrize("gain", [0.5, 1.0, 2.0])
     def test_ramp_error_is_one_over_the_velocity_constant(self, measured, gain):
-        # Franklin, Powell and Workman, Digital Control of Dynamic Systems, section on steady-state accuracy, from
-        # memory: K_v = lim (z - 1)G(z)/T, and the hold leaves it at lim sG(s) = K.
+        # Franklin, Powell and Workman, Digital Control of Dynamic Systems, section on steady-state accuracy,
+        # from memory: K_v = lim (z - 1)G(z)/T, and the hold leaves it at lim sG(s) = K.
         (error,) = self.values(measured, "steady-state error", gain=[gain], option='input = "ramp"')
         assert error == pytest.approx(1 / gain, rel=VALUE)
 

@@ -1,0 +1,216 @@
+"""Decisions: sweep and verdict Datasets in, the answer as plain numbers and as sentences out.
+
+Which period is the slowest, with which gain, what stops the loop from running slower, which design to take;
+the same for the nominal plant alone; and where nothing holds, how near it comes.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import xarray
+from numpy.typing import NDArray
+
+from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE
+from explorer.study.quantities import format_quantity
+from explorer.verdict.region import gain_windows, slowest_period
+
+Real = NDArray[np.float64]
+Decision = dict[str, Any]
+
+AS_STATED = 1.0  # the tolerance scale of the answer
+
+
+def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
+    """The decision with the tolerances as stated.
+
+    Parameters
+    ----------
+    sweep, verdict : from sweep and judge, of one study.
+
+    Returns
+    -------
+    dict : "answer" in words; "feasible"; "slowest_period" (None, or period, grid_period, gain, gain_window,
+        design, stopped_by, scenario, at_axis_end); "recommended" (None, or period, gain, design, least_slack,
+        binding, scenario, values); "nearest" where nothing holds; "nominal" with the first two for the nominal
+        plant; "unknown_points" (cells, at the tolerances as stated); "units".
+    """
+    box = verdict.sel({SCALE: AS_STATED})
+    worst = sweep.sel({SCALE: AS_STATED})
+    toleranced = _Planes(box["slack"], worst["worst_value"], worst["worst_scenario"], sweep)
+    nominal = _Planes(verdict["nominal_slack"], sweep["nominal_value"], None, sweep)
+    decision: Decision = {
+        "title": verdict.attrs["title"],
+        "tolerance_scale": AS_STATED,
+        "feasible": toleranced.holds_somewhere(),
+        "slowest_period": toleranced.slowest(),
+        "recommended": toleranced.best() if toleranced.holds_somewhere() else None,
+        "nearest": None if toleranced.holds_somewhere() else toleranced.best(),
+        "nominal": {
+            "slowest_period": nominal.slowest(),
+            "recommended": nominal.best() if nominal.holds_somewhere() else None,
+        },
+        "unknown_points": int(np.isnan(toleranced.least).sum()),
+        "points": int(toleranced.least.size),
+        "units": {"period": sweep[PERIOD].attrs["units"], "gain": sweep[GAIN].attrs["units"]}
+        | {name: sweep[name].attrs["units"] for name in toleranced.design},
+        "measure_units": dict(zip(_words(sweep[MEASURE]), _words(sweep["measure_unit"]), strict=True)),
+        "parameter_units": dict(zip(_words(sweep[PARAMETER]), _words(sweep["parameter_unit"]), strict=True)),
+        "limits": verdict.attrs["limits"],
+    } | {name: verdict.attrs[name] for name in ("study_sha256", "explorer_version", "seed", "created", "status_tally")}
+    return decision | {"answer": answer_in_words(decision)}
+
+
+class _Planes:
+    """Slack per requirement over (designs, periods, gains), for the tolerance box or the nominal plant."""
+
+    def __init__(
+        self, slack: xarray.DataArray, value: xarray.DataArray, scenario: xarray.DataArray | None, sweep: xarray.Dataset
+    ) -> None:
+        self.sweep = sweep
+        self.design = [str(name) for name in slack.dims if name not in (MEASURE, PERIOD, GAIN)]
+        order = (MEASURE, *self.design, PERIOD, GAIN)
+        self.sizes = tuple(slack.sizes[name] for name in self.design)
+        self.slack, self.value = (self._flat(array.transpose(*order).values) for array in (slack, value))
+        self.scenario = None if scenario is None else self._flat(scenario.transpose(*order).values)
+        self.least = self.slack.min(axis=0)
+        self.period, self.gain = sweep[PERIOD].values, sweep[GAIN].values
+
+    def _flat(self, array: NDArray[Any]) -> NDArray[Any]:
+        return array.reshape(array.shape[0], -1, *array.shape[-2:])
+
+    def holds_somewhere(self) -> bool:
+        return bool((self.least >= 0).any())
+
+    def slowest(self) -> Decision | None:
+        """The slowest period over all designs; ties go to the design with more slack there."""
+        found = [(slowest_period(plane, self.period), index) for index, plane in enumerate(self.least)]
+        held = [(edge, self.least[index][edge[1], edge[2]], index) for edge, index in found if edge is not None]
+        if not held:
+            return None
+        (period, row, column), _, design = max(held, key=lambda one: (one[0][0], one[1]))
+        windows = gain_windows(self.least[design][row], self.gain)
+        window = next(one for one in windows if one[0] <= self.gain[column] <= one[1])
+        at_end = row == len(self.period) - 1
+        beyond = (design, row if at_end else row + 1, column)
+        stopped_by = None if at_end else self._binding(beyond)
+        return {
+            "period": period,
+            "grid_period": float(self.period[row]),
+            "gain": float(self.gain[column]),
+            "gain_window": [window[0], window[1]],
+            "design": self._design_at(design),
+            "stopped_by": stopped_by,
+            "scenario": self._scenario_at(beyond, stopped_by),
+            "at_axis_end": at_end,
+        }
+
+    def best(self) -> Decision | None:
+        """The grid point with the largest least slack; None where every point is unknown."""
+        if np.isnan(self.least).all():
+            return None
+        place = np.unravel_index(np.nanargmax(self.least), self.least.shape)
+        design, row, column = (int(index) for index in place)
+        binding = self._binding((design, row, column))
+        names = _words(self.sweep[MEASURE])
+        return {
+            "period": float(self.period[row]),
+            "gain": float(self.gain[column]),
+            "design": self._design_at(design),
+            "least_slack": float(self.least[place]),
+            "binding": binding,
+            "scenario": self._scenario_at((design, row, column), binding),
+            "values": {name: float(self.value[(index, *place)]) for index, name in enumerate(names)},
+        }
+
+    def _binding(self, place: tuple[int, int, int]) -> str | None:
+        """The requirement with the least slack; the first unknown one where a slack is unknown."""
+        slack = self.slack[(slice(None), *place)]
+        return _words(self.sweep[MEASURE])[int(np.where(np.isnan(slack), -np.inf, slack).argmin())]
+
+    def _scenario_at(self, place: tuple[int, int, int], requirement: str | None) -> dict[str, float] | None:
+        if self.scenario is None or requirement is None:
+            return None
+        index = _words(self.sweep[MEASURE]).index(requirement)
+        row = self.sweep["scenario_parameter"].values[self.scenario[(index, *place)]]
+        return dict(zip(_words(self.sweep[PARAMETER]), row.tolist(), strict=True))
+
+    def _design_at(self, design: int) -> dict[str, float]:
+        place = np.unravel_index(design, self.sizes) if self.sizes else ()
+        return {name: float(self.sweep[name].values[at]) for name, at in zip(self.design, place, strict=True)}
+
+
+def answer_in_words(decision: Decision) -> str:
+    """The decision as a few sentences for the terminal and the printed page."""
+    sentences = _held(decision) if decision["feasible"] else _nowhere(decision)
+    nominal = decision["nominal"]["slowest_period"]
+    if nominal is None:
+        sentences.append("Even the nominal plant alone holds everything nowhere.")
+    else:
+        reach = "to the end of the axis, " if nominal["at_axis_end"] else ""
+        sentences.append(f"The nominal plant alone would allow {reach}{_period(decision, nominal['period'])}.")
+    if decision["unknown_points"]:
+        sentences.append(
+            f"{decision['unknown_points']} of {decision['points']} points are unknown and count as not feasible."
+        )
+    return " ".join(sentences)
+
+
+def _held(decision: Decision) -> list[str]:
+    slowest, best = decision["slowest_period"], decision["recommended"]
+    low, high = (_gain(decision, gain) for gain in slowest["gain_window"])
+    end = ", the end of the axis" if slowest["at_axis_end"] else ""
+    sentences = [
+        f"With the tolerances as stated every requirement holds up to a sample period of "
+        f"{_period(decision, slowest['period'])}{end}, at a gain of {_gain(decision, slowest['gain'])}"
+        f"{_design(decision, slowest)}.",
+        f"At {_period(decision, slowest['grid_period'])} the gain may lie between {low} and {high}.",
+    ]
+    if slowest["stopped_by"]:
+        sentences.append(f"Slower is stopped by “{slowest['stopped_by']}”{_plant(decision, slowest)}.")
+    sentences.append(
+        f"Recommended: period {_period(decision, best['period'])}, gain {_gain(decision, best['gain'])}"
+        f"{_design(decision, best)}, least slack {100 * best['least_slack']:.3g} %, "
+        f"bound by “{best['binding']}”{_plant(decision, best)}."
+    )
+    return sentences
+
+
+def _nowhere(decision: Decision) -> list[str]:
+    sentences = ["Nowhere on the swept axes does every requirement hold with the tolerances as stated."]
+    nearest = decision["nearest"]
+    if nearest is None:
+        return [*sentences, "Every point is unknown."]
+    missing = "" if np.isneginf(nearest["least_slack"]) else f" by {-100 * nearest['least_slack']:.3g} % of its scale"
+    return [
+        *sentences,
+        f"The nearest is period {_period(decision, nearest['period'])}, gain {_gain(decision, nearest['gain'])}"
+        f"{_design(decision, nearest)}: “{nearest['binding']}” is missed{missing}{_plant(decision, nearest)}.",
+    ]
+
+
+def _period(decision: Decision, value: float) -> str:
+    return format_quantity(value, decision["units"]["period"])
+
+
+def _gain(decision: Decision, value: float) -> str:
+    return format_quantity(value, decision["units"]["gain"])
+
+
+def _design(decision: Decision, place: Decision) -> str:
+    parts = [f"{name} = {format_quantity(value, decision['units'][name])}" for name, value in place["design"].items()]
+    return f" with {', '.join(parts)}" if parts else ""
+
+
+def _plant(decision: Decision, place: Decision) -> str:
+    """The scenario behind a binding requirement, in parentheses."""
+    if not place["scenario"]:
+        return ""
+    units = decision["parameter_units"]
+    parts = [f"{name} = {format_quantity(value, units[name])}" for name, value in place["scenario"].items()]
+    return f" (worst plant: {', '.join(parts)})"
+
+
+def _words(array: xarray.DataArray) -> list[str]:
+    return [str(word) for word in array.values]
