@@ -17,7 +17,7 @@ _HOMES = {
     "decide": "explorer.verdict.decisions",
 }
 
-__all__ = ["__version__", "decide", "judge", "read_study", "sweep"]  # noqa: F822 (loaded on first use)
+__all__ = ["__version__", "decide", "judge", "read_study", "sweep"]
 
 
 def __getattr__(name: str) -> Any:

@@ -15,7 +15,9 @@ from explorer.errors import ExplorerError, IncompleteError, OptionError
 
 STUDY = click.argument("study", type=click.Path(path_type=Path))
 FOLDER = click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
-JSON = click.option("--json", "as_data", is_flag=True, help="Print one JSON document and nothing else on stdout.")
+JSON = click.option(
+    "--json", "as_data", is_flag=True, help="Print one JSON document and nothing else on stdout."
+)
 
 
 class Commands(click.Group):
@@ -63,7 +65,9 @@ def check(study: Path, as_data: bool) -> None:
 
 @main.command()
 @STUDY
-@click.option("--out", type=click.Path(path_type=Path), help="Folder of the run [default: outputs/<stem of STUDY>].")
+@click.option(
+    "--out", type=click.Path(path_type=Path), help="Folder of the run [default: outputs/<stem of STUDY>]."
+)
 @click.option("--jobs", type=int, default=-1, show_default=True, help="Worker threads; -1: one per core.")
 @click.option("--fresh", is_flag=True, help="Start over instead of continuing or reusing a run.")
 @click.option("--strict", is_flag=True, help="Exit with status 1 when nothing is feasible.")
@@ -85,7 +89,9 @@ def sweep(study: Path, out: Path | None, jobs: int, fresh: bool, strict: bool) -
 
 @main.command()
 @FOLDER
-@click.option("--limit", "limits", multiple=True, metavar="NAME=VALUE", help='Another limit, e.g. "time to peak=90 ms".')
+@click.option(
+    "--limit", "limits", multiple=True, metavar="NAME=VALUE", help='Another limit, e.g. "time to peak=90 ms".'
+)
 @JSON
 @click.option("--strict", is_flag=True, help="Exit with status 1 when nothing is feasible.")
 def judge(folder: Path, limits: tuple[str, ...], as_data: bool, strict: bool) -> None:
@@ -106,10 +112,16 @@ def judge(folder: Path, limits: tuple[str, ...], as_data: bool, strict: bool) ->
 @main.command("map")
 @FOLDER
 @click.option("--show", metavar="slack|binding|share|REQUIREMENT", help="One field instead of the region.")
-@click.option("--tolerance-scale", type=float, default=1.0, show_default=True, help="One of the scales swept.")
-@click.option("--at", "place", multiple=True, metavar="NAME=VALUE", help="Value of a further design variable.")
+@click.option(
+    "--tolerance-scale", type=float, default=1.0, show_default=True, help="One of the scales swept."
+)
+@click.option(
+    "--at", "place", multiple=True, metavar="NAME=VALUE", help="Value of a further design variable."
+)
 @click.option("--format", "kind", type=click.Choice(["png", "svg", "pdf"]), default="png", show_default=True)
-def draw_map(folder: Path, show: str | None, tolerance_scale: float, place: tuple[str, ...], kind: str) -> None:
+def draw_map(
+    folder: Path, show: str | None, tolerance_scale: float, place: tuple[str, ...], kind: str
+) -> None:
     """Draw one region picture into the run's folder."""
     from explorer.views.folder import draw
 

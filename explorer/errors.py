@@ -25,9 +25,8 @@ class Fault:
 
     def __str__(self) -> str:
         place = self.file if self.line is None else f"{self.file}:{self.line}"
-        mend = f" {self.mend}" if self.mend else ""
-        key = f"{self.key}: " if self.key else ""
-        return f"{place}: {key}{self.found} {self.allowed}{mend}"
+        said = "; ".join(part for part in (self.found, self.allowed, self.mend) if part)
+        return f"{place}: {self.key}: {said}" if self.key else f"{place}: {said}"
 
 
 class ExplorerError(Exception):
@@ -42,7 +41,9 @@ class StudyError(ExplorerError):
     def __init__(self, faults: list[Fault]) -> None:
         self.faults = sorted(faults, key=lambda fault: (fault.line or 0, fault.key))
         count = f"{len(faults)} faults" if len(faults) > 1 else "1 fault"
-        super().__init__("\n".join([*(str(fault) for fault in self.faults), f"{count}; nothing was computed"]))
+        super().__init__(
+            "\n".join([*(str(fault) for fault in self.faults), f"{count}; nothing was computed"])
+        )
 
 
 class OptionError(ExplorerError):

@@ -22,7 +22,7 @@ SWEEP = {
         (MEASURE, SCALE, OTHERS, PERIOD, GAIN), "",
         "the measure's worst value over every scenario within the scale; NaN where one of them is unsolved",
     ),
-    "nominal_value": Stored((MEASURE, OTHERS, PERIOD, GAIN), "", "the measure at the nominal plant; NaN where unsolved"),
+    "nominal_value": Stored((MEASURE, OTHERS, PERIOD, GAIN), "", "the measure of the nominal plant; NaN: unsolved"),
     "worst_scenario": Stored(
         (MEASURE, SCALE, OTHERS, PERIOD, GAIN), "1",
         "scenario that gave the worst value, or the first unsolved one where the value is NaN",
@@ -31,7 +31,7 @@ SWEEP = {
         (SCALE, OTHERS, PERIOD, GAIN), "1",
         "share of scenarios that meet every requirement with the study's own limits; unsolved ones do not",
     ),
-    "scenario_parameter": Stored((SCENARIO, PARAMETER), "", "parameter values in SI; clock is true period over nominal"),
+    "scenario_parameter": Stored((SCENARIO, PARAMETER), "", "values in SI; clock is the true period over the nominal"),
     "scenario_scale": Stored((SCENARIO,), "1", "the tolerance scale at which the scenario enters"),
     "measure_kind": Stored((MEASURE,), "", "name of the measure in the catalogue, with its basis"),
     "measure_unit": Stored((MEASURE,), "", "unit of the measure's values"),
@@ -43,7 +43,7 @@ VERDICT = {
         (MEASURE, SCALE, OTHERS, PERIOD, GAIN), "1",
         "distance to the limit over the requirement's scale, >= 0 is met; -inf never reached; NaN unknown",
     ),
-    "least_slack": Stored((SCALE, OTHERS, PERIOD, GAIN), "1", "minimum over the requirements; NaN where one is unknown"),
+    "least_slack": Stored((SCALE, OTHERS, PERIOD, GAIN), "1", "least of the requirements; NaN where one is unknown"),
     "binding": Stored(
         (SCALE, OTHERS, PERIOD, GAIN), "1", "index of the requirement with the least slack; -1 where unknown"
     ),

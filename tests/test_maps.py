@@ -24,7 +24,7 @@ LIMITS = (0.5, 0.18, 10.0, np.nan)
 
 
 def worst_values(scale: float, lead: Any, period: Any, gain: Any) -> list[Any]:
-    """Invented but plausible: a lag of 37 ms, a lead, half a period of delay; tolerances only ever make it worse."""
+    """Invented but plausible: a lag of 37 ms, a lead, half a period of delay; tolerances make it worse."""
     lag, fast, slow = 37e-3 + 9e-3 * scale, 0.9 * gain * (1 + 0.12 * scale), 0.9 * gain * (1 - 0.12 * scale)
     margin = np.pi / 2 - np.arctan(fast * lag) + np.arctan(fast * lead) - fast * (period / 2 + 1.6e-3)
     damping = (np.degrees(margin) / 100).clip(-1.0, 0.999)
@@ -47,14 +47,15 @@ def run(
     period = xr.DataArray(np.geomspace(0.5e-3, 40e-3, 60) if periods is None else periods, dims="period")
     gain = xr.DataArray(np.geomspace(1.0, 400.0, 70) if gains is None else gains, dims="gain")
     lead = xr.DataArray(np.array(leads or (20e-3,)), dims="lead")
-    scales = [xr.concat(xr.broadcast(*worst_values(scale, lead, period, gain)), "measure") for scale in SCALES]
-    worst = xr.concat(scales, "tolerance_scale").transpose("measure", "tolerance_scale", "lead", "period", "gain")
+    scales = [xr.concat(xr.broadcast(*worst_values(one, lead, period, gain)), "measure") for one in SCALES]
+    order = ("measure", "tolerance_scale", "lead", "period", "gain")
+    worst = xr.concat(scales, "tolerance_scale").transpose(*order)
     if not leads:
         worst = worst.isel(lead=0)
     if unknown:
         worst[{"period": unknown[0], "gain": unknown[1]}] = np.nan
-    by_measure = {name: ("measure", list(values)) for name, values in
-                  {"measure": NAMES, "measure_kind": KINDS, "measure_unit": UNITS, "sense": SENSES}.items()}  # fmt: skip
+    words = {"measure": NAMES, "measure_kind": KINDS, "measure_unit": UNITS, "sense": SENSES}
+    by_measure = {name: ("measure", list(values)) for name, values in words.items()}
     worst = worst.assign_coords(
         period=("period", period.values, {"units": "s"}), gain=("gain", gain.values, {"units": "V/m"}),
         tolerance_scale=list(SCALES), **by_measure,
@@ -62,8 +63,8 @@ def run(
     if leads:
         worst = worst.assign_coords(lead=("lead", list(leads), {"units": "s"}))
     attrs = {
-        "title": "Camera carriage, position loop", "study_sha256": "3f2a9c81d07b" + 52 * "e", "explorer_version": "0.1.0",
-        "seed": 7, "created": "2031-04-02T09:30:00Z", "status_tally": "solved 474600; unsolved 3",
+        "title": "Camera carriage, position loop", "study_sha256": "3f2a9c81d07b" + 52 * "e", "seed": 7,
+        "explorer_version": "0.1.0", "created": "2031-04-02T09:30:00Z", "status_tally": "solved 474600; unsolved 3",
     }  # fmt: skip
     scenario = {"scenario_scale": ("scenario", np.repeat(SCALES, (1, 40, 72)))}
     limit = xr.DataArray(np.array(limits), dims="measure")
@@ -75,7 +76,9 @@ def run(
     share = np.exp(4 * least.clip(max=0.0))
     sweep = xr.Dataset({"worst_value": worst, "share_met": share, **scenario}, attrs=attrs)
     limits_by_period = limit.expand_dims(period=period.size).transpose("measure", "period")
-    fields = {"slack": slack, "least_slack": least, "binding": binding, "feasible": least >= 0, "limit": limits_by_period}
+    nominal = slack.sel(tolerance_scale=0.0, drop=True)
+    fields = {"slack": slack, "least_slack": least, "binding": binding, "feasible": least >= 0}
+    fields |= {"limit": limits_by_period, "nominal_slack": nominal}
     return sweep, xr.Dataset({**fields, **scenario}, attrs=attrs).assign_coords(worst.coords)
 
 
@@ -89,7 +92,8 @@ def decide(verdict: xr.Dataset, scale: float = 1.0) -> dict[str, Any]:
         "binding": NAMES[int(verdict["binding"].sel(point.coords))],
     }  # fmt: skip
     if float(point) < 0:
-        return {"tolerance_scale": scale, "feasible": False, "slowest_period": None, "recommended": None, "nearest": best}
+        nothing = {"slowest_period": None, "recommended": None}
+        return {"tolerance_scale": scale, "feasible": False, "nearest": best} | nothing
     held = verdict["feasible"].sel(tolerance_scale=scale).sel(best["design"])
     period = held["period"].values[held.any("gain").values][-1]
     gains = held["gain"].values[held.sel(period=period).values]

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 import explorer.kernels  # the cache folder is chosen there
 
-assert explorer.kernels  # noqa: S101
+assert explorer.kernels
 
 _WHOLE = 1e-12  # dead times this close to a whole number of samples are that number
 _TERMS = 20  # Taylor terms for a norm of at most 1/2: the remainder is below 0.5**20/20! = 4e-25
@@ -48,14 +48,18 @@ def _exponential(x: complex) -> complex:
 def _divided_difference(x: complex, y: complex) -> complex:
     """exp[x, y] = (exp x - exp y)/(x - y), from the side that cannot overflow."""
     if x == y:
-        return _exponential(x)
-    if x.real > y.real:
-        return _exponential(x) * _exponential_minus_one(y - x) / (y - x)
-    return _exponential(y) * _exponential_minus_one(x - y) / (x - y)
+        result: complex = _exponential(x)
+    elif x.real > y.real:
+        result = _exponential(x) * _exponential_minus_one(y - x) / (y - x)
+    else:
+        result = _exponential(y) * _exponential_minus_one(x - y) / (x - y)
+    return result
 
 
 @_kernel
-def exponential_of_triangle(matrix: NDArray[Any], time: float, result: NDArray[Any], spare: NDArray[Any]) -> None:
+def exponential_of_triangle(
+    matrix: NDArray[Any], time: float, result: NDArray[Any], spare: NDArray[Any]
+) -> None:
     """result = exp(matrix * time) for a lower triangular complex matrix (n, n); spare is overwritten.
 
     Scaling and squaring with the diagonal and the first subdiagonal put in exactly after every squaring.
@@ -90,7 +94,9 @@ def exponential_of_triangle(matrix: NDArray[Any], time: float, result: NDArray[A
 
 
 @_kernel
-def _multiply_triangles(left: NDArray[Any], right: NDArray[Any], factor: float, product: NDArray[Any]) -> None:
+def _multiply_triangles(
+    left: NDArray[Any], right: NDArray[Any], factor: float, product: NDArray[Any]
+) -> None:
     for i in range(left.shape[0]):
         for j in range(i + 1):
             total = 0.0 + 0.0j

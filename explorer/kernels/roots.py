@@ -22,12 +22,12 @@ STATUS_MEANING = {
     UNCERTIFIED: "poles not certified by their residual",
     TOO_LONG: "dead time of too many samples",
 }
-HIGHEST_DEGREE = 48  # companion matrices beyond this are slow, and dead times that long are reported instead
+HIGHEST_DEGREE = 96  # companion matrices beyond this are slow, and dead times that long are reported instead
 
 # Which coefficient-wise backward error certifies a root set: rounding alone leaves about (4 + n) units; LAPACK
 # is backward stable only in norm, so it is given a margin, still a thousandth of the accuracy promised.
 _UNITS = 2000.0
-_NEAR_ORIGIN = 0.1  # |z| below which w = z - 1 no longer resolves z
+_RESOLVED = 1e-11  # estimated relative error of s up to which a root in w needs no second opinion in z
 
 
 class Poles(NamedTuple):
@@ -57,13 +57,16 @@ def poles(polynomial_w: Real, polynomial_z: Real) -> Poles:
     log_z = np.full((len(in_w), degree), np.nan, complex)
     good = np.flatnonzero(status == SOLVED)
     if len(good) and degree > 0:
-        roots = _certified_roots(in_w[good], status, good)
+        roots, sound = _certified_roots(in_w[good])
         answer = logarithm_of_one_plus(roots)
-        near = np.flatnonzero((np.abs(1 + roots) < _NEAR_ORIGIN).any(axis=1))
-        if len(near):
-            answer[near] = _with_small_poles(answer[near], roots[near], in_z[good[near]])
-        log_z[good] = answer
-        log_z[status != SOLVED] = np.nan
+        estimate = error_of_logarithm(in_w[good], roots, 1 + roots, answer)
+        doubtful = np.flatnonzero((estimate > _RESOLVED).any(axis=1))
+        if len(doubtful):
+            answer[doubtful] = _better_of(
+                answer[doubtful], roots[doubtful], estimate[doubtful], in_z[good[doubtful]]
+            )
+        status[good[~sound]] = UNCERTIFIED
+        log_z[good[sound]] = answer[sound]
     return Poles(log_z.reshape(*shape, degree), status.reshape(shape))
 
 
@@ -106,15 +109,32 @@ def _admitted(in_w: Real, in_z: Real) -> NDArray[np.int8]:
     return status
 
 
-def _certified_roots(polynomial: Real, status: NDArray[np.int8], where: NDArray[np.intp]) -> Complex:
-    """Roots with their certificate; those that fail are polished once more, then given up."""
+def _certified_roots(polynomial: Real) -> tuple[Complex, NDArray[np.bool_]]:
+    """Roots, and whether each set has its certificate; those that fail at first are polished once more."""
     roots = polynomial_roots(polynomial)
-    failed = np.flatnonzero(~certified(polynomial, roots))
+    sound = certified(polynomial, roots)
+    failed = np.flatnonzero(~sound)
     if len(failed):
         roots[failed] = _polished(polynomial[failed], roots[failed])
-        failed = failed[~certified(polynomial[failed], roots[failed])]
-        status[where[failed]] = UNCERTIFIED
-    return roots
+        sound[failed] = certified(polynomial[failed], roots[failed])
+    return roots, sound
+
+
+def error_of_logarithm(polynomial: Real, roots: Complex, z: Complex, log_z: Complex) -> Real:
+    """First-order estimate of the relative error that rounding in the coefficients leaves in log z.
+
+    eps Σ|p_k||x|^k / |p'(x)| is the root's own, Higham, Accuracy and Stability, 2nd ed. 2002, §26.3; one relative
+    unit of z is 1/|log z| of its logarithm. inf for multiple roots and for z = 0.
+    """
+    size, slope, value = np.zeros(roots.shape), np.zeros_like(roots), np.zeros_like(roots)
+    absolute = np.abs(roots)
+    for index in range(polynomial.shape[-1]):
+        slope = slope * roots + value
+        value = value * roots + polynomial[..., index : index + 1]
+        size = size * absolute + np.abs(polynomial[..., index : index + 1])
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        estimate = 4 * np.finfo(float).eps * size / (np.abs(slope) * np.abs(z) * np.abs(log_z))
+    return np.where(np.isnan(estimate), np.inf, estimate)
 
 
 def certified(polynomial: Real, roots: Complex) -> NDArray[np.bool_]:
@@ -165,15 +185,35 @@ def _quadratic(b: Real, c: Real) -> Complex:
     return np.stack([first, second], axis=-1)
 
 
-def _with_small_poles(log_z: Complex, roots: Complex, in_z: Real) -> Complex:
-    """Replace the poles near z = 0 by the smallest roots of the polynomial in z."""
-    trailing = polynomial_roots(in_z)
-    trailing = np.take_along_axis(trailing, np.argsort(np.abs(trailing), axis=-1, kind="stable"), -1)
-    order = np.argsort(np.abs(1 + roots), axis=-1, kind="stable")
-    count = (np.abs(1 + roots) < _NEAR_ORIGIN).sum(axis=-1)
-    rank = np.arange(roots.shape[-1])
+def _better_of(first: Complex, roots: Complex, estimate: Real, in_z: Real) -> Complex:
+    """Pair the certified roots in w (first, as log z) with those of the polynomial in z; keep the better of each.
+
+    Near z = 0, and with many samples of dead time, only z resolves the poles; near z = 1 only w does. A root in z
+    counts when it solves its polynomial to rounding by itself; the pairing keeps the set complete.
+    """
+    second = polynomial_roots(in_z)
+    loose = np.flatnonzero(~_solves(in_z, second).all(axis=1))
+    if len(loose):
+        second[loose] = _polished(in_z[loose], second[loose])
     with np.errstate(divide="ignore"):
-        better = np.log(np.abs(trailing)) + 1j * np.arctan2(trailing.imag, trailing.real)
-    sorted_log = np.take_along_axis(log_z, order, -1)
-    np.put_along_axis(log_z, order, np.where(rank < count[:, None], better, sorted_log), -1)
-    return log_z
+        logarithm = np.log(np.abs(second)) + 1j * np.arctan2(second.imag, second.real)
+    doubt = np.where(second == 0, 0.0, error_of_logarithm(in_z, second, second, logarithm))
+    doubt = np.where(_solves(in_z, second), doubt, np.inf)
+    result, rows = first.copy(), np.arange(len(first))
+    taken = np.zeros(second.shape, bool)
+    for column in np.argsort(estimate, axis=1, kind="stable").T:  # the surest choose first
+        distance = np.abs(second - (1 + roots[rows, column])[:, None])
+        partner = np.where(taken, np.inf, distance).argmin(axis=1)
+        taken[rows, partner] = True
+        improved = doubt[rows, partner] < estimate[rows, column]
+        result[rows, column] = np.where(improved, logarithm[rows, partner], first[rows, column])
+    return result
+
+
+def _solves(polynomial: Real, roots: Complex) -> NDArray[np.bool_]:
+    """Which roots are roots to rounding, each by itself: |p(x)| small beside Σ|p_k||x|^k."""
+    value, size, absolute = np.zeros_like(roots), np.zeros(roots.shape), np.abs(roots)
+    for index in range(polynomial.shape[-1]):
+        value = value * roots + polynomial[..., index : index + 1]
+        size = size * absolute + np.abs(polynomial[..., index : index + 1])
+    return np.asarray(np.abs(value) <= _UNITS * np.finfo(float).eps * size)

@@ -106,6 +106,10 @@ def _product(left: Real, right: Real) -> Real:
 
 def _sum(larger: Real, smaller: Real) -> Real:
     """Sum of two polynomials, the first of at least the second's degree."""
-    result = np.array(np.broadcast_to(larger, (*np.broadcast_shapes(larger.shape[:-1], smaller.shape[:-1]), larger.shape[-1])))
+    result = np.array(
+        np.broadcast_to(
+            larger, (*np.broadcast_shapes(larger.shape[:-1], smaller.shape[:-1]), larger.shape[-1])
+        )
+    )
     result[..., larger.shape[-1] - smaller.shape[-1] :] += smaller
     return result

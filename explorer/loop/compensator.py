@@ -49,7 +49,9 @@ def compensator_on_axes(loop: Loop, values: Mapping[str, float], gain: Real, per
         return _as_compensator(*_both(loop, values, names, period), affine=False, shape=(len(gain), periods))
 
 
-def _both(loop: Loop, values: Mapping[str, float], gain: dict[str, Real], period: Real) -> tuple[Rational, Rational]:
+def _both(
+    loop: Loop, values: Mapping[str, float], gain: dict[str, Real], period: Real
+) -> tuple[Rational, Rational]:
     names = {name: np.full((1, 1, 1), value) for name, value in values.items()}
     names |= {"period": period.reshape(1, 1, -1)} | gain
     if not loop.conversion:
@@ -71,7 +73,9 @@ def _as_compensator(in_w: Rational, in_z: Rational, affine: bool, shape: tuple[i
     for rational in (in_w, in_z):
         numerator, denominator = rational.numerator(), rational.denominator()
         if (denominator[..., 0] == 0).any():
-            raise ExpressionError(1, "the compensator's leading coefficient in z vanishes somewhere on the axes;")
+            raise ExpressionError(
+                1, "the compensator's leading coefficient in z vanishes somewhere on the axes;"
+            )
         length = denominator.shape[-1]
         if numerator.shape[-1] > length:
             raise ExpressionError(

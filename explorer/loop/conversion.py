@@ -53,7 +53,9 @@ def _substituted(transfer: Rational, gain: Real, above: Real, below: Real) -> Ra
             weight = multiply(weight, under)
             lower = factor[..., index : index + 1] * weight
             total = multiply(total, rate) + lower
-        result = result * Rational(np.ones((1,) * transfer.scale.ndim), ((total, power), (under, -degree * power)))
+        result = result * Rational(
+            np.ones((1,) * transfer.scale.ndim), ((total, power), (under, -degree * power))
+        )
     return result
 
 
@@ -85,7 +87,9 @@ def _matched_factor(factor: Real, power: int, period: Real, in_w: bool) -> Ratio
     positions = moved if in_w else np.exp(roots)
     at_origin = roots == 0
     with np.errstate(divide="ignore", invalid="ignore"):
-        share = np.where(at_origin, 1 / period[..., None], -roots / period[..., None] / np.where(at_origin, 1, -moved))
+        share = np.where(
+            at_origin, 1 / period[..., None], -roots / period[..., None] / np.where(at_origin, 1, -moved)
+        )
     scale = spread[..., 0] * np.prod(share, axis=-1).real
     product = np.ones((*batch, 1), complex)
     for index in range(roots.shape[-1]):

@@ -32,7 +32,7 @@ class Realisation:
     @property
     def order(self) -> int:
         """Number of states."""
-        return self.start.shape[1]
+        return int(self.start.shape[1])
 
     @property
     def poles(self) -> Complex:
@@ -59,13 +59,18 @@ def realise_transfer(node: Node, values: Mapping[str, Real], scenarios: int) -> 
     numerator = _spread(transfer.numerator()[0], scenarios)
     factors = [_spread(factor, scenarios) for factor in transfer.denominator_factors()]
     if any((factor[:, 0] == 0).any() for factor in factors):
-        raise ExpressionError(1, "the order of the transfer changes inside the tolerance box (a leading coefficient is 0);")
+        raise ExpressionError(
+            1, "the order of the transfer changes inside the tolerance box (a leading coefficient is 0);"
+        )
     leading = np.prod([factor[:, 0] for factor in factors], axis=0) if factors else np.ones(scenarios)
-    poles = np.concatenate([polynomial_roots(factor) for factor in factors] or [np.zeros((scenarios, 0))], axis=1)
+    poles = np.concatenate(
+        [polynomial_roots(factor) for factor in factors] or [np.zeros((scenarios, 0), complex)], axis=1
+    )
     order = poles.shape[1]
     if numerator.shape[1] - 1 > order:
         raise ExpressionError(
-            1, f"the numerator is of degree {numerator.shape[1] - 1}, the denominator of {order}: no real plant is improper;"
+            1,
+            f"the numerator is of degree {numerator.shape[1] - 1}, the denominator of {order}: no plant is;",
         )
     remaining = np.zeros((scenarios, order + 1), complex)
     remaining[:, order + 1 - numerator.shape[1] :] = numerator / leading[:, None]
@@ -84,7 +89,9 @@ def realise_transfer(node: Node, values: Mapping[str, Real], scenarios: int) -> 
     return Realisation(state, start, output, remaining[:, 0].real)
 
 
-def realise_states(states: Mapping[str, tuple[tuple[Node, ...], ...]], values: Mapping[str, Real], scenarios: int) -> Realisation:
+def realise_states(
+    states: Mapping[str, tuple[tuple[Node, ...], ...]], values: Mapping[str, Real], scenarios: int
+) -> Realisation:
     """State matrices (single input, single output) brought to lower triangular form by a unitary change of states.
 
     Source: complex Schur form after balancing, Golub and Van Loan, Matrix Computations, 4th ed., §7.1, §7.5.

@@ -26,7 +26,7 @@ def realise(study: Study, values: Mapping[str, Real]) -> Realisation:
     if plant.states is not None:
         realisation = realise_states(plant.states, values, scenarios)
     else:
-        assert plant.transfer is not None  # noqa: S101 (reading guarantees one of the two)
+        assert plant.transfer is not None
         realisation = realise_transfer(plant.transfer, values, scenarios)
     if study.loop.sensor is not None:
         realisation = in_series(realisation, realise_transfer(study.loop.sensor, values, scenarios))
@@ -71,13 +71,15 @@ def dead_times(study: Study, values: Mapping[str, Real]) -> Real:
 def _sampled_already(study: Study, values: Mapping[str, Real], period: Real) -> Sampled:
     """A plant given in z, read straight into w and into z; only whole-sample delays exist for it."""
     scenarios = _count(values)
-    assert study.plant.transfer is not None  # noqa: S101 (reading guarantees it for z)
+    assert study.plant.transfer is not None
     parts = []
     for polynomial in ([1.0, 1.0], [1.0, 0.0]):
         transfer = rational_in(study.plant.transfer, "z", polynomial, values)
         numerator, denominator = transfer.numerator()[0], transfer.denominator()
         if (denominator[..., 0] == 0).any():
-            raise ExpressionError(1, "the order of the transfer changes inside the tolerance box (a leading coefficient is 0);")
+            raise ExpressionError(
+                1, "the order of the transfer changes inside the tolerance box (a leading coefficient is 0);"
+            )
         padded = np.zeros((scenarios, denominator.shape[-1]))
         if numerator.shape[-1] > denominator.shape[-1]:
             raise ExpressionError(

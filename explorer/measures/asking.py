@@ -18,5 +18,5 @@ def read_study(path: str | Path | None = None, *, text: str | None = None) -> St
         raise TypeError("read_study takes a path or text=..., one of them")
     if text is not None:
         return read_study_text(text, "study", CATALOGUE)
-    assert path is not None  # noqa: S101 (one of the two, checked above)
+    assert path is not None
     return read_study_file(path, CATALOGUE)

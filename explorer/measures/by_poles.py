@@ -44,7 +44,9 @@ def time_to_peak(log_z: Complex, period: Real) -> Real:
     """pi/|Im s| of the slowest-decaying pair of non-real z [s]; +inf when there is none."""
     pair, exists = _slowest_pair(log_z)
     with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(exists, np.pi * period / np.abs(pair.imag), np.where(np.isnan(pair.real), np.nan, np.inf))
+        return np.where(
+            exists, np.pi * period / np.abs(pair.imag), np.where(np.isnan(pair.real), np.nan, np.inf)
+        )
 
 
 def overshoot(log_z: Complex) -> Real:

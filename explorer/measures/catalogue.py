@@ -39,7 +39,7 @@ CATALOGUE: tuple[Measure, ...] = (
     ),
     Measure(
         name="overshoot", basis="poles", unit="%", better="less",
-        definition="100 exp(-pi zeta/sqrt(1 - zeta^2)) of the slowest-decaying pair of non-real z; 0 when there is none",
+        definition="100 exp(-pi zeta/sqrt(1 - zeta^2)) of the slowest-decaying pair of non-real z; 0 when none",
         source="Franklin, Powell and Emami-Naeini, Feedback Control of Dynamic Systems, §3.4",
     ),
 )  # fmt: skip

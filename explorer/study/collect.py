@@ -49,7 +49,9 @@ class Collector:
         """A time that is not negative, in `unit` ("s" or "sample"); None with a fault."""
         return self.in_unit(value, path, unit, lowest=0.0)
 
-    def in_unit(self, value: str | int | float, path: Path, unit: str, lowest: float = -float("inf")) -> float | None:
+    def in_unit(
+        self, value: str | int | float, path: Path, unit: str, lowest: float = -float("inf")
+    ) -> float | None:
         """A number converted into a unit and not below `lowest`; None with a fault."""
         try:
             number = read_in_unit(value, unit)

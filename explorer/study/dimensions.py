@@ -1,8 +1,9 @@
 """Dimensions: expression trees in, the physical dimension of their value out, for reading's check of units.
 
 A bare number may carry any unit that its writer left out, so it never causes a refusal: in a sum it takes the
-other side's dimension (and that is noted when it is not 1), in a product it makes the result `bare` too. Only
-a contradiction between stated units is a fault.
+other side's dimension (and that is noted when it is not 1), in a product it makes the result `bare` too. The
+same goes for a term without any parameter, such as the middle one of s^2 + s + 400, where a factor 1 may carry
+the unit. Only a contradiction between stated units is a fault.
 """
 
 from __future__ import annotations
@@ -19,10 +20,16 @@ DIMENSIONLESS = Dimension()
 
 @dataclass(frozen=True)
 class Measured:
-    """A dimension, and whether a bare number stands in it and may carry the unit that is missing."""
+    """A dimension; bare : a number without unit stands in it and may carry what is missing; stated : a unit does."""
 
     dimension: Dimension
     bare: bool = False
+    stated: bool = False
+
+    @property
+    def open(self) -> bool:
+        """Whether a missing unit can be explained: by a bare number, or by a factor 1 nobody wrote."""
+        return self.bare or not self.stated
 
 
 @dataclass
@@ -50,46 +57,50 @@ class Inference:
             return self._sum(node, left, right)
         if node.sign == "**":
             return self._power(node, left, right)
-        bare = left.bare or right.bare
-        if node.sign == "*":
-            return Measured(left.dimension * right.dimension, bare)
-        return Measured(left.dimension / right.dimension, bare)
+        dimension = left.dimension * right.dimension if node.sign == "*" else left.dimension / right.dimension
+        return Measured(dimension, left.bare or right.bare, left.stated or right.stated)
 
     def _sum(self, node: Operation, left: Measured, right: Measured) -> Measured:
         if isinstance(node.left, Number) and node.left.value == 0.0:  # a leading minus
             return right
+        stated = left.stated or right.stated
         if left.dimension == right.dimension:
-            return Measured(left.dimension, left.bare and right.bare)
-        if not (left.bare or right.bare):
+            return Measured(left.dimension, left.bare and right.bare, stated)
+        if not (left.open or right.open):
             raise ExpressionError(
-                node.column, f"adds [{left.dimension}] and [{right.dimension}]; both sides of {node.sign} need one unit"
+                node.column,
+                f"adds [{left.dimension}] and [{right.dimension}]; both sides of {node.sign} need one unit",
             )
-        if left.bare and right.bare:
+        if left.open and right.open:
             self._note(node, "bare numbers are taken to carry what makes both sides one unit")
-            return Measured(right.dimension, bare=True)
-        known = right if left.bare else left
+            return Measured(right.dimension, left.bare and right.bare, stated)
+        known = right if left.open else left
         self._note(node, f"the bare number is taken to be in [{known.dimension}]")
-        return Measured(known.dimension)
+        return Measured(known.dimension, stated=stated)
 
     def _power(self, node: Operation, base: Measured, exponent: Measured) -> Measured:
-        if not (exponent.bare or exponent.dimension.is_dimensionless):
-            raise ExpressionError(node.column, f"an exponent has no unit; this one is in [{exponent.dimension}]")
+        if not (exponent.open or exponent.dimension.is_dimensionless):
+            raise ExpressionError(
+                node.column, f"an exponent has no unit; this one is in [{exponent.dimension}]"
+            )
         if base.dimension.is_dimensionless:
             return base
         power = constant(node.right)
         if power is None:
             raise ExpressionError(node.column, f"[{base.dimension}] may only be raised to a plain number")
-        return Measured(base.dimension**power, base.bare)
+        return Measured(base.dimension**power, base.bare, base.stated)
 
     def _function(self, node: Call) -> Measured:
         inner = self.of(node.argument)
         if node.function == "sqrt":
-            return Measured(inner.dimension ** Fraction(1, 2), inner.bare)
+            return Measured(inner.dimension ** Fraction(1, 2), inner.bare, inner.stated)
         if node.function == "abs":
             return inner
         if not inner.dimension.is_dimensionless:
-            if not inner.bare:
-                raise ExpressionError(node.column, f"{node.function}() takes a pure number, found [{inner.dimension}]")
+            if not inner.open:
+                raise ExpressionError(
+                    node.column, f"{node.function}() takes a pure number, found [{inner.dimension}]"
+                )
             self._note(node, "the bare number is taken to carry the argument's unit")
         return Measured(DIMENSIONLESS)
 

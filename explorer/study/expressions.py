@@ -134,7 +134,9 @@ class _Parser:
         self.position = 0
         self.depth = 0
         if len(self.tokens) > 2 * MOST_OPERATIONS:
-            raise ExpressionError(self.tokens[2 * MOST_OPERATIONS][2], f"more than {MOST_OPERATIONS} operations")
+            raise ExpressionError(
+                self.tokens[2 * MOST_OPERATIONS][2], f"more than {MOST_OPERATIONS} operations"
+            )
 
     def whole(self) -> Node:
         node = self.sum()
@@ -173,7 +175,9 @@ class _Parser:
         base = self.atom()
         if self.ahead() in ("**", "^"):
             _, column = self.take()
-            return Operation("**", base, self.signed(), column)  # right-associative, binds tighter than a sign
+            return Operation(
+                "**", base, self.signed(), column
+            )  # right-associative, binds tighter than a sign
         return base
 
     def atom(self) -> Node:
@@ -200,7 +204,9 @@ class _Parser:
     def call(self, text: str, column: int) -> Node:
         if text not in FUNCTIONS:
             hint = closest(text, FUNCTIONS) or f"To multiply write {text}*(...)."
-            raise ExpressionError(column, f"no function {text!r}; the functions are {', '.join(FUNCTIONS)}. {hint}")
+            raise ExpressionError(
+                column, f"no function {text!r}; the functions are {', '.join(FUNCTIONS)}. {hint}"
+            )
         _, opening = self.take()
         return Call(text, self.parenthesis(opening), column)
 

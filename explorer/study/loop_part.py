@@ -15,7 +15,12 @@ CONVERSIONS = ("backward difference", "bilinear", "matched poles and zeros", "bi
 
 
 def read_loop(
-    collector: Collector, section: LoopSection, names: list[str], parameters: list[str], time_unit: str, in_z: bool
+    collector: Collector,
+    section: LoopSection,
+    names: list[str],
+    parameters: list[str],
+    time_unit: str,
+    in_z: bool,
 ) -> Loop | None:
     """The loop; `names` may stand in the compensator, `parameters` in the sensor; in_z: the plant is given in z."""
     compensator = collector.expression(section.compensator, ("loop", "compensator"), [*names, "s", "z"])
@@ -29,7 +34,11 @@ def read_loop(
                             "a plant given in z includes its sensor already", "Remove it.")  # fmt: skip
     clock = collector.in_unit(section.clock_tolerance, ("loop", "clock_tolerance"), "1", lowest=0.0)
     if clock is not None and (clock >= 0.5 or (clock > 0 and in_z)):
-        allowed = "none with a plant given in z, which is known at one period only" if in_z else "allowed: below 50 %"
+        allowed = (
+            "none with a plant given in z, which is known at one period only"
+            if in_z
+            else "allowed: below 50 %"
+        )
         collector.fault(("loop", "clock_tolerance"), f"found {shown(section.clock_tolerance)}", allowed)
     execution = math.nan
     if section.execution_time is not None:
@@ -40,7 +49,15 @@ def read_loop(
         collector.fault(("loop", "compensator"), f"found {shown(section.compensator)} without gain",
                         "the swept gain must stand in the compensator", "Write gain*(...).")  # fmt: skip
     return Loop(
-        compensator, str(section.compensator), conversion, exact_at, delay, sensor, str(section.sensor), clock, execution
+        compensator,
+        str(section.compensator),
+        conversion,
+        exact_at,
+        delay,
+        sensor,
+        str(section.sensor),
+        clock,
+        execution,
     )
 
 
@@ -52,16 +69,26 @@ def _conversion(collector: Collector, section: LoopSection, compensator: Node | 
     in_s, in_z = depends_on(compensator, "s"), depends_on(compensator, "z")
     rule = section.conversion
     if in_s and in_z:
-        collector.fault(("loop", "compensator"), f"found {shown(section.compensator)} with s and z", "allowed: s or z, not both")
+        collector.fault(
+            ("loop", "compensator"),
+            f"found {shown(section.compensator)} with s and z",
+            "allowed: s or z, not both",
+        )
         return "", 0.0
     if in_s and rule is None:
         collector.fault(("loop", "compensator"), f"found {shown(section.compensator)} in s",
-                        "a compensator in s needs a conversion", f'Add conversion = one of {", ".join(CONVERSIONS)} 12 Hz.')  # fmt: skip
+                        "a compensator in s needs a conversion",
+                        f"Add conversion = one of {', '.join(CONVERSIONS)} 12 Hz.")  # fmt: skip
         return "", 0.0
     if rule is None:
         return "", 0.0
     if not in_s:
-        collector.fault(path, f"found {shown(rule)} with a compensator in z", "allowed: only with a compensator in s", "Remove it.")
+        collector.fault(
+            path,
+            f"found {shown(rule)} with a compensator in z",
+            "allowed: only with a compensator in s",
+            "Remove it.",
+        )
         return "", 0.0
     if rule in CONVERSIONS[:3]:
         return rule, 0.0
@@ -70,7 +97,9 @@ def _conversion(collector: Collector, section: LoopSection, compensator: Node | 
         if frequency == 0:
             collector.fault(path, f"found {shown(rule)}", "allowed: a frequency above 0, such as 12 Hz")
         return "bilinear", frequency or 0.0
-    collector.fault(path, f"found {shown(rule)}", f"allowed: {', '.join(CONVERSIONS)} 12 Hz", closest(rule, CONVERSIONS))
+    collector.fault(
+        path, f"found {shown(rule)}", f"allowed: {', '.join(CONVERSIONS)} 12 Hz", closest(rule, CONVERSIONS)
+    )
     return "", 0.0
 
 
@@ -85,7 +114,7 @@ def _computing_delay(collector: Collector, section: LoopSection, time_unit: str,
     if share is not None:
         if share < 0 or (in_z and share != round(share)):
             collector.fault(path, f"found {shown(section.computing_delay)}",
-                            "allowed: a whole number of periods with a plant given in z" if in_z else "allowed: 0 or more")  # fmt: skip
+                            "allowed: whole periods with a plant given in z" if in_z else "allowed: 0 or more")  # fmt: skip
             return None
         return Delay(periods=share)
     time = collector.time(section.computing_delay, path, time_unit)
@@ -93,14 +122,22 @@ def _computing_delay(collector: Collector, section: LoopSection, time_unit: str,
 
 
 def check_units(
-    collector: Collector, plant: Plant, loop: Loop, parameters: dict[str, Measured], variables: dict[str, Measured]
+    collector: Collector,
+    plant: Plant,
+    loop: Loop,
+    parameters: dict[str, Measured],
+    variables: dict[str, Measured],
 ) -> None:
     """The gain around the loop must come out dimensionless as far as units are stated.
 
     Notes what bare numbers were taken to mean; a contradiction no bare number explains is a fault.
     """
     per_second = Dimension() / SECOND
-    known = parameters | {"s": Measured(per_second), "z": Measured(DIMENSIONLESS), "pi": Measured(DIMENSIONLESS)}
+    known = parameters | {
+        "s": Measured(per_second),
+        "z": Measured(DIMENSIONLESS),
+        "pi": Measured(DIMENSIONLESS),
+    }
     around = Measured(DIMENSIONLESS, bare=plant.states is not None)
     parts: list[str] = []
     for label, node, path, names in (
@@ -114,10 +151,12 @@ def check_units(
         try:
             measured = inference.of(node)
         except ExpressionError as error:
-            collector.expression_fault({"plant": plant.text, "sensor": loop.sensor_text}.get(label, loop.text), path, error)
+            collector.expression_fault(
+                {"plant": plant.text, "sensor": loop.sensor_text}.get(label, loop.text), path, error
+            )
             return
         collector.assumptions += [f"{'.'.join(path)}: {note}" for note in inference.assumptions]
-        around = Measured(around.dimension * measured.dimension, around.bare or measured.bare)
+        around = Measured(around.dimension * measured.dimension, around.bare or measured.open, True)
         parts.append(f"{label} [{measured.dimension}]")
     if around.dimension.is_dimensionless:
         return

@@ -59,7 +59,9 @@ class Parameter:
 
     def reach(self, scale: float) -> tuple[float, float]:
         """Lowest and highest value inside `scale` times the tolerance."""
-        return self.nominal - scale * (self.nominal - self.low), self.nominal + scale * (self.high - self.nominal)
+        return self.nominal - scale * (self.nominal - self.low), self.nominal + scale * (
+            self.high - self.nominal
+        )
 
 
 @dataclass(frozen=True)

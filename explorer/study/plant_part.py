@@ -20,15 +20,21 @@ def usable_name(collector: Collector, name: str, path: Path) -> bool:
     """Whether a parameter or design variable may be called so; a fault if not."""
     if name in RESERVED or name in FUNCTIONS:
         taken = ", ".join((*RESERVED, *FUNCTIONS))
-        collector.fault(path, f"the name {name!r} is taken", f"names of its own besides {taken}", "Choose another name.")
+        collector.fault(
+            path, f"the name {name!r} is taken", f"names of its own besides {taken}", "Choose another name."
+        )
         return False
     if not _NAME.fullmatch(name.replace("\u00b5", "\u03bc")):
-        collector.fault(path, f"found the name {shown(name)}", "letters, digits and _ only, at most 40, no digit first")
+        collector.fault(
+            path, f"found the name {shown(name)}", "letters, digits and _ only, at most 40, no digit first"
+        )
         return False
     return True
 
 
-def read_parameters(collector: Collector, table: dict[str, Any]) -> tuple[dict[str, Parameter], dict[str, Measured]]:
+def read_parameters(
+    collector: Collector, table: dict[str, Any]
+) -> tuple[dict[str, Parameter], dict[str, Measured]]:
     """All parameters by name, and their dimensions; faulty ones keep a place so that expressions still read."""
     parameters: dict[str, Parameter] = {}
     dimensions: dict[str, Measured] = {}
@@ -37,16 +43,23 @@ def read_parameters(collector: Collector, table: dict[str, Any]) -> tuple[dict[s
         if not usable_name(collector, key, path):
             continue
         name = key.replace("\u00b5", "\u03bc")
-        section = collector.section(ParameterSection, value if isinstance(value, dict) else {"nominal": value}, path)
+        section = collector.section(
+            ParameterSection, value if isinstance(value, dict) else {"nominal": value}, path
+        )
         found = _parameter(collector, name, section, path) if section else None
-        parameters[name], dimensions[name] = found or (Parameter(name, 1.0, 1.0, 1.0, ""), Measured(Dimension(), True))
+        parameters[name], dimensions[name] = found or (
+            Parameter(name, 1.0, 1.0, 1.0, ""),
+            Measured(Dimension(), True),
+        )
     return parameters, dimensions
 
 
 def _parameter(
     collector: Collector, name: str, section: ParameterSection, path: Path
 ) -> tuple[Parameter, Measured] | None:
-    given = {key for key in ("nominal", "tolerance", "from_", "to", "any_of") if getattr(section, key) is not None}
+    given = {
+        key for key in ("nominal", "tolerance", "from_", "to", "any_of") if getattr(section, key) is not None
+    }
     if given in ({"nominal"}, {"nominal", "tolerance"}):
         return _nominal(collector, name, section, path)
     if given in ({"from_", "to"}, {"from_", "to", "nominal"}):
@@ -55,7 +68,9 @@ def _parameter(
         return _variants(collector, name, section, path)
     keys = ", ".join(sorted(key.rstrip("_") for key in given)) or "nothing"
     collector.fault(
-        path, f"found {keys}", "allowed: nominal; nominal and tolerance; from and to (and nominal); any_of (and nominal)"
+        path,
+        f"found {keys}",
+        "allowed: nominal; nominal and tolerance; from and to (and nominal); any_of (and nominal)",
     )
     return None
 
@@ -86,7 +101,7 @@ def _nominal(
             collector.fault((*path, "tolerance"), f"found {shown(section.tolerance)}", "allowed: 0 or more")
             return None
     parameter = Parameter(name, nominal.value, nominal.value - half, nominal.value + half, unit_of(nominal))
-    return parameter, Measured(nominal.dimension, not nominal.stated)
+    return parameter, Measured(nominal.dimension, not nominal.stated, nominal.stated)
 
 
 def _alike(collector: Collector, quantities: list[Quantity | None], path: Path) -> list[Quantity] | None:
@@ -97,7 +112,9 @@ def _alike(collector: Collector, quantities: list[Quantity | None], path: Path) 
     first = known[0]
     for other in known[1:]:
         if other.stated != first.stated or other.dimension != first.dimension:
-            collector.fault(path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit for all values")
+            collector.fault(
+                path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit for all values"
+            )
             return None
     return known
 
@@ -117,7 +134,9 @@ def _range(
     low, high = known[0].value, known[1].value
     nominal = known[2].value if len(known) > 2 else 0.5 * (low + high)
     if low >= high:
-        collector.fault((*path, "to"), f"found {shown(section.to)}", f"allowed: more than from = {shown(section.from_)}")
+        collector.fault(
+            (*path, "to"), f"found {shown(section.to)}", f"allowed: more than from = {shown(section.from_)}"
+        )
         return None
     if not low <= nominal <= high:
         collector.fault(
@@ -125,7 +144,9 @@ def _range(
             f"allowed: between {shown(section.from_)} and {shown(section.to)}",
         )  # fmt: skip
         return None
-    return Parameter(name, nominal, low, high, unit_of(known[0])), Measured(known[0].dimension, not known[0].stated)
+    return Parameter(name, nominal, low, high, unit_of(known[0])), Measured(
+        known[0].dimension, not known[0].stated, known[0].stated
+    )
 
 
 def _variants(
@@ -147,20 +168,33 @@ def _variants(
         return None
     ordered = (nominal, *(number for number in numbers if number != nominal))
     parameter = Parameter(name, nominal, nominal, nominal, unit_of(known[0]), ordered)
-    return parameter, Measured(known[0].dimension, not known[0].stated)
+    return parameter, Measured(known[0].dimension, not known[0].stated, known[0].stated)
 
 
 def read_plant(
-    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], sampled_at: float, time_unit: str
+    collector: Collector,
+    section: PlantSection,
+    dimensions: dict[str, Measured],
+    sampled_at: float,
+    time_unit: str,
 ) -> Plant | None:
     """The plant by transfer in s or z, or by matrices; sampled_at 0 for s, time_unit "s" or "sample"."""
     if (section.transfer is None) == (section.states is None):
-        collector.fault(("plant",), "found " + ("both" if section.transfer else "neither"), "allowed: transfer or states, one of them")
+        collector.fault(
+            ("plant",),
+            "found " + ("both" if section.transfer else "neither"),
+            "allowed: transfer or states, one of them",
+        )
         return None
     dead_time = _dead_time(collector, section, dimensions, sampled_at, time_unit)
     if section.states is not None:
         if section.sampled_at is not None:
-            collector.fault(("plant", "sampled_at"), "found with states", "allowed: only with a transfer in z", "Remove it.")
+            collector.fault(
+                ("plant", "sampled_at"),
+                "found with states",
+                "allowed: only with a transfer in z",
+                "Remove it.",
+            )
         states = _states(collector, section.states, dimensions)
         return Plant("s", None, states, dead_time, None, "state matrices") if states else None
     node = collector.expression(section.transfer or 0, ("plant", "transfer"), ["s", "z", *dimensions])
@@ -168,7 +202,11 @@ def read_plant(
         return None
     in_z = depends_on(node, "z")
     if in_z and depends_on(node, "s"):
-        collector.fault(("plant", "transfer"), f"found {shown(section.transfer)} with s and z", "allowed: s or z, not both")
+        collector.fault(
+            ("plant", "transfer"),
+            f"found {shown(section.transfer)} with s and z",
+            "allowed: s or z, not both",
+        )
         return None
     if in_z and section.sampled_at is None:
         collector.fault(
@@ -184,7 +222,11 @@ def read_plant(
 
 
 def _dead_time(
-    collector: Collector, section: PlantSection, dimensions: dict[str, Measured], sampled_at: float, time_unit: str
+    collector: Collector,
+    section: PlantSection,
+    dimensions: dict[str, Measured],
+    sampled_at: float,
+    time_unit: str,
 ) -> Node | None:
     """A parameter's name, a time, or whole samples for a plant in z; None for none."""
     value, path = section.dead_time, ("plant", "dead_time")
@@ -241,7 +283,9 @@ def _states(
     return result if complete else None
 
 
-def parameter_bounds(collector: Collector, parameters: dict[str, Parameter], scale: float, times: set[str]) -> None:
+def parameter_bounds(
+    collector: Collector, parameters: dict[str, Parameter], scale: float, times: set[str]
+) -> None:
     """Faults where a scaled tolerance changes a parameter's sign, or makes a time negative."""
     for parameter in parameters.values():
         low, high = parameter.reach(scale)
@@ -255,5 +299,3 @@ def parameter_bounds(collector: Collector, parameters: dict[str, Parameter], sca
                 "allowed: one sign over the whole tolerance box",
                 "Narrow the tolerance or lower the largest tolerance scale.",
             )
-
-

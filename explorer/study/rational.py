@@ -56,7 +56,9 @@ class Rational:
 
     def _over(self, below: tuple[Factor, ...]) -> Array:
         """The expanded numerator after bringing self to the denominator `below` (powers negative)."""
-        lift = Rational(self.scale, _merged(self.factors + tuple((factor, -power) for factor, power in below)))
+        lift = Rational(
+            self.scale, _merged(self.factors + tuple((factor, -power) for factor, power in below))
+        )
         return lift.numerator()
 
     def numerator(self) -> Array:
@@ -112,11 +114,17 @@ def evaluate(node: Node, variable: str, polynomial: list[float], names: Mapping[
     NotAffineError : the gain is symbolic and the tree is not affine in it.
     """
     axes = max((value.ndim for value in names.values()), default=1)
-    reader = _Evaluation(variable, np.array(polynomial, dtype=float).reshape((1,) * axes + (-1,)), names, axes)
+    reader = _Evaluation(
+        variable, np.array(polynomial, dtype=float).reshape((1,) * axes + (-1,)), names, axes
+    )
     with np.errstate(all="ignore"):
         result = reader.of(node)
-    if not all(np.isfinite(array).all() for array in (result.scale, *(factor for factor, _ in result.factors))):
-        raise ExpressionError(1, "the value is not a finite number somewhere in the tolerance box or on an axis;")
+    if not all(
+        np.isfinite(array).all() for array in (result.scale, *(factor for factor, _ in result.factors))
+    ):
+        raise ExpressionError(
+            1, "the value is not a finite number somewhere in the tolerance box or on an axis;"
+        )
     return result
 
 
@@ -160,7 +168,9 @@ class _Evaluation:
         return value.scale
 
     def _call(self, node: Call) -> Rational:
-        return Rational(_FUNCTIONS[node.function](self._scalar(node.argument, f"the argument of {node.function}()")))
+        return Rational(
+            _FUNCTIONS[node.function](self._scalar(node.argument, f"the argument of {node.function}()"))
+        )
 
     def _inverse(self, node: Operation, value: Rational) -> Rational:
         dead = (value.scale == 0).all(axis=0)
@@ -175,7 +185,8 @@ class _Evaluation:
         exponent = constant(node.right)
         if exponent is None or exponent.denominator != 1 or abs(exponent) > HIGHEST_DEGREE:
             raise ExpressionError(
-                node.column, f"the exponent here must be a whole number from -{HIGHEST_DEGREE} to {HIGHEST_DEGREE}"
+                node.column,
+                f"the exponent here must be a whole number from -{HIGHEST_DEGREE} to {HIGHEST_DEGREE}",
             )
         power = int(exponent)
         if power < 0:
@@ -185,7 +196,9 @@ class _Evaluation:
     def _power_of(self, base: Rational, power: int) -> Rational:
         if base.scale.shape[0] > 1 and power > 1:
             raise NotAffineError
-        return Rational(base.scale**power, tuple((factor, own * power) for factor, own in base.factors if power))
+        return Rational(
+            base.scale**power, tuple((factor, own * power) for factor, own in base.factors if power)
+        )
 
 
 def _same(left: Array, right: Array) -> bool:

@@ -38,7 +38,9 @@ def read_study_file(path: str | FilePath, catalogue: Sequence[Measure]) -> Study
             raw = stream.read(LARGEST_FILE + 1)
         text = raw.decode("utf-8")
     except OSError as error:
-        raise StudyError([Fault(str(path), None, "", "cannot be read", error.strerror or str(error))]) from None
+        raise StudyError(
+            [Fault(str(path), None, "", "cannot be read", error.strerror or str(error))]
+        ) from None
     except UnicodeDecodeError as error:
         raise StudyError(
             [Fault(str(path), None, "", f"byte {error.start} is not UTF-8", "allowed: a TOML text in UTF-8")]
@@ -77,7 +79,9 @@ def fault_in(study: Study, path: Path, found: str, error: ExpressionError) -> St
 def _parsed(collector: Collector) -> dict[str, Any] | None:
     text, file = collector.text, collector.file
     if len(text.encode()) > LARGEST_FILE:
-        collector.faults.append(Fault(file, None, "", "the file is too large", f"allowed: {LARGEST_FILE // 1024} KiB"))
+        collector.faults.append(
+            Fault(file, None, "", "the file is too large", f"allowed: {LARGEST_FILE // 1024} KiB")
+        )
         return None
     try:
         return tomllib.loads(text)
@@ -88,14 +92,22 @@ def _parsed(collector: Collector) -> dict[str, Any] | None:
         numbers = [int(word.strip(",)")) for word in place.split() if word.strip(",)").isdigit()]
         where = f" at column {numbers[1]}" if len(numbers) > 1 else ""
         collector.faults.append(
-            Fault(file, numbers[0] if numbers else None, "", f"not TOML{where}: {message}", "see toml.io for the format")
+            Fault(
+                file,
+                numbers[0] if numbers else None,
+                "",
+                f"not TOML{where}: {message}",
+                "see toml.io for the format",
+            )
         )
     return None
 
 
 def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measure]) -> Study | None:
     top = collector.section(StudySection, data, ())
-    tables = {key: data.get(key) if isinstance(data.get(key), dict) else {} for key in ("plant", "loop", "sweep")}
+    tables: dict[str, Any] = {
+        key: data.get(key) if isinstance(data.get(key), dict) else {} for key in ("plant", "loop", "sweep")
+    }
     plant_table, loop_table, sweep_table = tables["plant"] or {}, tables["loop"] or {}, tables["sweep"] or {}
     plant_section = collector.section(PlantSection, plant_table, ("plant",)) if "plant" in data else None
     raw = plant_table.get("parameters")
@@ -109,7 +121,7 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
     if in_z and sampled_at:
         axes["period"] = Axis("period", np.array([sampled_at[0]]), time_unit, "values")
-    variables["period"] = Measured(SECOND)
+    variables["period"] = Measured(SECOND, stated=True)
     loop = _loop(collector, data, loop_table, [*dimensions, *variables], list(dimensions), time_unit, in_z)
     wanted = data.get("requirements")
     rows = [row for row in wanted if isinstance(row, dict)] if isinstance(wanted, list) else []
@@ -165,7 +177,7 @@ def _check_together(collector: Collector, plant: Plant, loop: Loop, axes: dict[s
     for name in axes:
         if name not in ("gain", "period") and not depends_on(loop.compensator, name):
             collector.fault(("sweep", name), f"{name!r} is swept but does not stand in the compensator",
-                            "allowed: axes that change the loop", "Use it in the compensator or remove it.")  # fmt: skip
+                            "allowed: axes that change the loop", "Use it there or remove it.")  # fmt: skip
     if "period" not in axes:
         return
     period = axes["period"].values

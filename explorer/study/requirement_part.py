@@ -29,21 +29,29 @@ def read_requirements(
             continue
         if any(found.name == other.name for other in requirements):
             place = (*path, "name") if section and section.name else path
-            collector.fault(place, f"the name {shown(found.name)} stands twice", "names are unique", "Add name = \"...\".")
+            collector.fault(
+                place, f"the name {shown(found.name)} stands twice", "names are unique", 'Add name = "...".'
+            )
             continue
         requirements.append(found)
     return requirements
 
 
 def _requirement(
-    collector: Collector, section: RequirementSection, path: Path, catalogue: Sequence[Measure], time_unit: str
+    collector: Collector,
+    section: RequirementSection,
+    path: Path,
+    catalogue: Sequence[Measure],
+    time_unit: str,
 ) -> Requirement | None:
     measure = _measure(collector, section, path, catalogue)
     if measure is None:
         return None
     name = section.name or measure.name
     if section.band is not None and measure.band is None:
-        collector.fault((*path, "band"), f"found with {measure.name}", "allowed: only with a settling time", "Remove it.")
+        collector.fault(
+            (*path, "band"), f"found with {measure.name}", "allowed: only with a settling time", "Remove it."
+        )
     band = _band(collector, section, measure, path)
     if not measure.takes_limit:
         for key in ("at_least", "at_most", "scale"):
@@ -103,7 +111,9 @@ def _measure(
     bases = [measure.basis for measure in named if measure.basis]
     if not bases:
         if section.basis is not None:
-            collector.fault((*path, "basis"), f"found with {section.measure}", "it has one reading only", "Remove it.")
+            collector.fault(
+                (*path, "basis"), f"found with {section.measure}", "it has one reading only", "Remove it."
+            )
         return named[0]
     if section.basis not in bases:
         found = "no basis" if section.basis is None else f"found {shown(section.basis)}"
@@ -121,5 +131,7 @@ def _band(collector: Collector, section: RequirementSection, measure: Measure, p
         return measure.band
     band = collector.in_unit(section.band, (*path, "band"), "1")
     if band is not None and not 0 < band < 1:
-        collector.fault((*path, "band"), f"found {shown(section.band)}", 'allowed: between 0 and 100 %, such as "2 %"')
+        collector.fault(
+            (*path, "band"), f"found {shown(section.band)}", 'allowed: between 0 and 100 %, such as "2 %"'
+        )
     return band if band is not None else measure.band

@@ -43,7 +43,9 @@ def _flag(value: Any) -> bool:
 def _scales(value: Any) -> tuple[float, ...]:
     if not isinstance(value, list) or not 0 < len(value) <= 50:
         raise ValueError("a list of 1 to 50 numbers such as [0, 0.5, 1.0]")
-    if any(isinstance(item, bool) or not isinstance(item, int | float) or not 0 <= item <= 100 for item in value):
+    if any(
+        isinstance(item, bool) or not isinstance(item, int | float) or not 0 <= item <= 100 for item in value
+    ):
         raise ValueError("numbers from 0 to 100")
     return tuple(sorted({float(item) for item in value}))
 
@@ -190,5 +192,11 @@ def _described(item: dict[str, Any], known: list[str]) -> Found:
 
 def shown(value: Any) -> str:
     """A value as its writer would recognise it, control characters escaped and at most 60 characters long."""
-    text = repr(value) if not isinstance(value, str) else ascii(value) if not value.isprintable() else f'"{value}"'
+    text = (
+        repr(value)
+        if not isinstance(value, str)
+        else ascii(value)
+        if not value.isprintable()
+        else f'"{value}"'
+    )
     return text if len(text) <= 60 else text[:57] + "..."

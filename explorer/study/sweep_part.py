@@ -34,12 +34,16 @@ def read_axes(
         if key == "scenarios":
             continue
         if key == "period" and fixed_period:
-            collector.fault(path, "found a period axis", "a plant given in z is known at one period only", "Remove it.")
+            collector.fault(
+                path, "found a period axis", "a plant given in z is known at one period only", "Remove it."
+            )
             continue
         if key not in ("gain", "period") and not usable_name(collector, key, path):
             continue
         if key in taken:
-            collector.fault(path, f"the name {key!r} is a plant parameter too", "allowed: one meaning per name")
+            collector.fault(
+                path, f"the name {key!r} is a plant parameter too", "allowed: one meaning per name"
+            )
             continue
         dimensions[key] = Measured(Dimension(), bare=True)
         section = collector.section(AxisSection, value, path)
@@ -63,7 +67,11 @@ def read_scenarios(collector: Collector, table: Any) -> ScenarioPlan | None:
         return None
     if section.interior > MOST_POINTS or section.seed >= 2**63:
         key = "interior" if section.interior > MOST_POINTS else "seed"
-        collector.fault((*path, key), f"found {getattr(section, key)}", f"allowed: up to {MOST_POINTS if key == 'interior' else '2^63 - 1'}")
+        collector.fault(
+            (*path, key),
+            f"found {getattr(section, key)}",
+            f"allowed: up to {MOST_POINTS if key == 'interior' else '2^63 - 1'}",
+        )
         return None
     return ScenarioPlan(section.interior, section.corners, section.seed, section.tolerance_scales)
 
@@ -72,27 +80,42 @@ def _axis(collector: Collector, name: str, section: AxisSection, path: Path) -> 
     if section.values is not None:
         spare = [key for key in ("from_", "to", "points", "spacing") if getattr(section, key) is not None]
         if spare:
-            collector.fault(path, f"found values and {spare[0].rstrip('_')}", "allowed: values alone, or from, to, points, spacing")
+            collector.fault(
+                path,
+                f"found values and {spare[0].rstrip('_')}",
+                "allowed: values alone, or from, to, points, spacing",
+            )
             return None
         quantities = [collector.quantity(value, (*path, "values")) for value in section.values]
         return _checked(collector, name, quantities, None, "values", (*path, "values"))
     if section.from_ is None or section.to is None or section.points is None:
         lacking = [key.rstrip("_") for key in ("from_", "to", "points") if getattr(section, key) is None]
-        collector.fault(path, f"missing {', '.join(lacking)}", "an axis is from, to, points (and spacing), or values")
+        collector.fault(
+            path, f"missing {', '.join(lacking)}", "an axis is from, to, points (and spacing), or values"
+        )
         return None
     spacing = section.spacing or "log"
     if spacing not in ("log", "linear"):
         collector.fault((*path, "spacing"), f"found {shown(spacing)}", 'allowed: "log" or "linear"')
         return None
     if not 2 <= section.points <= MOST_POINTS:
-        collector.fault((*path, "points"), f"found {section.points}", f"allowed: 2 to {MOST_POINTS} (one value: values = [...])")
+        collector.fault(
+            (*path, "points"),
+            f"found {section.points}",
+            f"allowed: 2 to {MOST_POINTS} (one value: values = [...])",
+        )
         return None
     ends = [collector.quantity(section.from_, (*path, "from")), collector.quantity(section.to, (*path, "to"))]
     return _checked(collector, name, ends, section.points, spacing, path)
 
 
 def _checked(
-    collector: Collector, name: str, quantities: list[Quantity | None], points: int | None, spacing: str, path: Path
+    collector: Collector,
+    name: str,
+    quantities: list[Quantity | None],
+    points: int | None,
+    spacing: str,
+    path: Path,
 ) -> tuple[Axis, Measured] | None:
     known = [quantity for quantity in quantities if quantity is not None]
     if len(known) < len(quantities):
@@ -100,14 +123,18 @@ def _checked(
     first = known[0]
     for other in known[1:]:
         if (other.stated, other.dimension) != (first.stated, first.dimension):
-            collector.fault(path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit along an axis")
+            collector.fault(
+                path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit along an axis"
+            )
             return None
     if name == "period" and first.stated and str(first.dimension) != "s":
-        collector.fault(path, f"found {shown(first.text)}", "allowed: a time such as \"2 ms\"")
+        collector.fault(path, f"found {shown(first.text)}", 'allowed: a time such as "2 ms"')
         return None
     numbers = [quantity.value for quantity in known]
     if points is not None and numbers[0] >= numbers[1]:
-        collector.fault((*path, "to"), f"found {shown(known[1].text)}", f"allowed: more than from = {shown(first.text)}")
+        collector.fault(
+            (*path, "to"), f"found {shown(known[1].text)}", f"allowed: more than from = {shown(first.text)}"
+        )
         return None
     if min(numbers) <= 0 and (name == "period" or spacing == "log"):
         reason = "a period is above 0" if name == "period" else "a log axis starts above 0"
@@ -117,7 +144,9 @@ def _checked(
         collector.fault(path, "found one value twice", "allowed: different values")
         return None
     unit = "s" if name == "period" else str(first.dimension) if first.stated else ""
-    return Axis(name, _spaced(numbers, points, spacing), unit, spacing), Measured(first.dimension, not first.stated)
+    return Axis(name, _spaced(numbers, points, spacing), unit, spacing), Measured(
+        first.dimension, not first.stated, first.stated
+    )
 
 
 def _spaced(numbers: list[float], points: int | None, spacing: str) -> np.ndarray[Any, np.dtype[np.float64]]:

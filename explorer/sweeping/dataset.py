@@ -75,7 +75,7 @@ class Grid:
                 MEASURE, _text([unit_in(one.measure, study.time_unit) for one in requirements]),
                 _attributes("measure_unit"),
             ),
-            SCALE: (SCALE, np.array(study.scenarios.tolerance_scales), {"units": "1", "long_name": "share of the tolerances"}),
+            SCALE: (SCALE, np.array(study.scenarios.tolerance_scales), {"units": "1", "long_name": "scale"}),
             **{axis.name: _axis(axis, axis.name) for axis in study.design},
             PERIOD: _axis(study.period, "sample period"),
             GAIN: _axis(study.gain, "gain"),
@@ -104,8 +104,10 @@ class Grid:
         for code, meaning in STATUS_MEANING.items():
             if code != SOLVED and self.tally[code]:
                 gain, period = self.first[code]
-                place = f"gain = {format_quantity(gain, self.study.gain.unit)}, period = {format_quantity(period, self.study.period.unit)}"
-                parts.append(f"unsolved {self.tally[code]} of {self.tally.sum()} ({meaning}), first at {place}")
+                where = f"gain = {format_quantity(gain, self.study.gain.unit)}"
+                when = f"period = {format_quantity(period, self.study.period.unit)}"
+                count = f"{self.tally[code]} of {self.tally.sum()}"
+                parts.append(f"unsolved {count} ({meaning}), first at {where}, {when}")
         return "; ".join(parts)
 
 

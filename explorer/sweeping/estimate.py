@@ -14,7 +14,9 @@ from explorer.sweeping.scenarios import Scenarios, scenarios_of
 from explorer.sweeping.tiles import LOOPS_AT_ONCE, Tile, compute, loops_in, tiles_of
 
 _TRIAL_LOOPS = 8_000
-_BYTES_PER_LOOP = 2_500  # companion matrices, roots and certificates of one loop of order 6 while it is solved
+_BYTES_PER_LOOP = (
+    2_500  # companion matrices, roots and certificates of one loop of order 6 while it is solved
+)
 
 
 class Estimate(NamedTuple):
@@ -36,7 +38,9 @@ def estimate(study: Study) -> tuple[Scenarios, Estimate]:
     few = np.unique(np.linspace(0, len(study.period.values) - 1, 4).round().astype(int))
     count = max(1, min(len(scenarios.scale), _TRIAL_LOOPS // (len(few) * len(study.gain.values))))
     rows = np.unique(np.linspace(0, len(scenarios.scale) - 1, count).round().astype(int))
-    part = dataclasses.replace(study, period=dataclasses.replace(study.period, values=study.period.values[few]))
+    part = dataclasses.replace(
+        study, period=dataclasses.replace(study.period, values=study.period.values[few])
+    )
     table = dataclasses.replace(scenarios, values=scenarios.values[rows], scale=scenarios.scale[rows])
     seconds = 0.0
     for _ in range(2):

@@ -68,14 +68,23 @@ def _in_memory(
 
 
 def _in_folder(
-    study: Study, scenarios: Scenarios, tiles: list[Tile], folder: Path, jobs: int, fresh: bool, progress: Progress | None
+    study: Study,
+    scenarios: Scenarios,
+    tiles: list[Tile],
+    folder: Path,
+    jobs: int,
+    fresh: bool,
+    progress: Progress | None,
 ) -> xarray.Dataset:
     store, file = TileStore(folder, run_key(study)), folder / SWEEP_FILE
     if fresh:
         store.clear()
     elif file.exists():
         known = read_dataset(file)
-        if known.attrs.get("study_sha256") == study.sha256 and known.attrs.get("explorer_version") == explorer.__version__:
+        if (
+            known.attrs.get("study_sha256") == study.sha256
+            and known.attrs.get("explorer_version") == explorer.__version__
+        ):
             return known
     grid = Grid(study, scenarios)
     missing = []
@@ -85,7 +94,9 @@ def _in_folder(
             missing.append(tile)
         else:
             grid.put(tile, stored)
-    for done, (tile, result) in enumerate(_computed(study, scenarios, missing, jobs), len(tiles) - len(missing) + 1):
+    for done, (tile, result) in enumerate(
+        _computed(study, scenarios, missing, jobs), len(tiles) - len(missing) + 1
+    ):
         store.put(tile.number, result)
         grid.put(tile, result)
         if progress:

@@ -24,7 +24,7 @@ CLOCK = "clock"  # true sample period / nominal one
 
 @dataclass(frozen=True)
 class Scenarios:
-    """values : (S, parameters) SI; scale : (S,) tolerance scale at which each enters; note : "" or what was left out."""
+    """values : (S, parameters) SI; scale : (S,) scale at which each enters; note : "" or what was left out."""
 
     names: tuple[str, ...]
     units: tuple[str, ...]
@@ -64,7 +64,9 @@ def scenarios_of(study: Study) -> Scenarios:
             low, high = parameters[index].reach(scale)
             centre = parameters[index].nominal
             away = unit[:, column]
-            points[:, index] = np.where(away < 0, centre + away * (centre - low), centre + away * (high - centre))
+            points[:, index] = np.where(
+                away < 0, centre + away * (centre - low), centre + away * (high - centre)
+            )
         crossed = _crossed(points, variants, parameters)
         rows.append(crossed)
         scales.append(np.full(len(crossed), scale))
@@ -80,7 +82,8 @@ def scenarios_of(study: Study) -> Scenarios:
 def _variants(parameters: list[Parameter], nominal: Real) -> Real:
     """Every combination of discrete variants at the nominal values, the nominal combination first."""
     choices = [parameter.variants or (parameter.nominal,) for parameter in parameters]
-    return np.array(list(itertools.product(*choices))).reshape(-1, len(nominal))
+    rows = list(itertools.product(*choices))
+    return np.array(rows, dtype=float).reshape(len(rows), len(nominal))
 
 
 def _crossed(points: Real, variants: Real, parameters: list[Parameter]) -> Real:
@@ -93,7 +96,8 @@ def _crossed(points: Real, variants: Real, parameters: list[Parameter]) -> Real:
 def _corner_signs(count: int) -> tuple[Real, str]:
     """All 2**count corners as -1 and +1; beyond the limit a stated subset of them."""
     if 2**count <= MOST_CORNERS:
-        return np.array(list(itertools.product((-1.0, 1.0), repeat=count))).reshape(-1, count), ""
+        rows = list(itertools.product((-1.0, 1.0), repeat=count))
+        return np.array(rows, dtype=float).reshape(len(rows), count), ""
     patterns = {(-1.0,) * count, (1.0,) * count}
     for index in range(count):
         for lone in (-1.0, 1.0):

@@ -33,7 +33,9 @@ def owned(folder: Path) -> Iterator[None]:
         folder.mkdir(parents=True, exist_ok=True)
         handle = (folder / ".lock").open("w")
     except OSError as error:
-        raise RunError(f"{folder}: cannot be written: {error.strerror}. Choose another folder with --out.") from None
+        raise RunError(
+            f"{folder}: cannot be written: {error.strerror}. Choose another folder with --out."
+        ) from None
     with handle:
         try:
             fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
@@ -85,12 +87,18 @@ def write_whole(path: Path, content: bytes) -> None:
     except OSError as error:
         with contextlib.suppress(OSError):
             part.unlink()
-        raise RunError(f"{path}: cannot be written: {error.strerror}; what was finished before stays") from None
+        raise RunError(
+            f"{path}: cannot be written: {error.strerror}; what was finished before stays"
+        ) from None
 
 
 def write_dataset(dataset: xarray.Dataset, path: Path) -> None:
     """Write a Dataset as netCDF-4, compressed, whole or not at all."""
-    encoding = {name: {"zlib": True, "complevel": 1} for name, array in dataset.data_vars.items() if array.dtype.kind in "fiub"}
+    encoding = {
+        name: {"zlib": True, "complevel": 1}
+        for name, array in dataset.data_vars.items()
+        if array.dtype.kind in "fiub"
+    }
     part = path.with_name(path.name + ".part")
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
@@ -112,7 +120,9 @@ def read_dataset(path: Path) -> xarray.Dataset:
         with xarray.open_dataset(path, engine="h5netcdf") as stored:
             return stored.load()
     except Exception as error:  # the readers below raise many kinds for a damaged file
-        raise RunError(f"{path}: not a readable netCDF file ({_first_line(error)}). Run the sweep again.") from None
+        raise RunError(
+            f"{path}: not a readable netCDF file ({_first_line(error)}). Run the sweep again."
+        ) from None
 
 
 def _first_line(error: Exception) -> Any:

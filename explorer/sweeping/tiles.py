@@ -59,7 +59,9 @@ def tiles_of(study: Study, scenarios: int) -> list[Tile]:
     length = len(study.period.values)
     step = int(np.clip(LOOPS_IN_TILE // (scenarios * len(study.gain.values)), 1, length))
     cuts = [(design, start) for design in range(designs) for start in range(0, length, step)]
-    return [Tile(number, design, start, min(start + step, length)) for number, (design, start) in enumerate(cuts)]
+    return [
+        Tile(number, design, start, min(start + step, length)) for number, (design, start) in enumerate(cuts)
+    ]
 
 
 def design_values(study: Study, design: int) -> dict[str, float]:
@@ -82,7 +84,9 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile) -> TileResult:
     for start in range(0, len(scenarios.scale), block):
         chosen = slice(start, min(start + block, len(scenarios.scale)))
         sampled = _sampled(study, {name: values[chosen] for name, values in table.items()}, period)
-        values = np.full((len(study.requirements), len(sampled.whole), len(period), len(study.gain.values)), np.nan)
+        values = np.full(
+            (len(study.requirements), len(sampled.whole), len(period), len(study.gain.values)), np.nan
+        )
         for rows, columns, found in closed_loop_poles(sampled, compensator, study.gain.values):
             reduction.count(found.status, period[columns])
             true_period = sampled.period[rows, columns][:, None]
@@ -148,7 +152,11 @@ class _Reduction:
 
     def _take(self, index: int, scale: int, signed: Real, numbers: NDArray[np.intp]) -> None:
         """Merge one block; a NaN wins over every number and its first scenario is the one reported."""
-        worst, place, unsolved = self.worst[index, scale], self.place[index, scale], self.unsolved[index, scale]
+        worst, place, unsolved = (
+            self.worst[index, scale],
+            self.place[index, scale],
+            self.unsolved[index, scale],
+        )
         failed = np.isnan(signed)
         key = np.where(failed, np.inf, signed)
         where = np.where(failed.any(axis=0), failed.argmax(axis=0), key.argmax(axis=0))
@@ -187,5 +195,6 @@ class _Reduction:
 
 def loops_in(study: Study, scenarios: int) -> int:
     """Number of closed loops of the whole sweep."""
-    return scenarios * int(np.prod([len(axis.values) for axis in (*study.design, study.gain, study.period)], dtype=int))
-
+    return scenarios * int(
+        np.prod([len(axis.values) for axis in (*study.design, study.gain, study.period)], dtype=int)
+    )

@@ -58,7 +58,10 @@ def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
         "measure_units": dict(zip(_words(sweep[MEASURE]), _words(sweep["measure_unit"]), strict=True)),
         "parameter_units": dict(zip(_words(sweep[PARAMETER]), _words(sweep["parameter_unit"]), strict=True)),
         "limits": verdict.attrs["limits"],
-    } | {name: verdict.attrs[name] for name in ("study_sha256", "explorer_version", "seed", "created", "status_tally")}
+    } | {
+        name: verdict.attrs[name]
+        for name in ("study_sha256", "explorer_version", "seed", "created", "status_tally")
+    }
     return decision | {"answer": answer_in_words(decision)}
 
 
@@ -66,7 +69,11 @@ class _Planes:
     """Slack per requirement over (designs, periods, gains), for the tolerance box or the nominal plant."""
 
     def __init__(
-        self, slack: xarray.DataArray, value: xarray.DataArray, scenario: xarray.DataArray | None, sweep: xarray.Dataset
+        self,
+        slack: xarray.DataArray,
+        value: xarray.DataArray,
+        scenario: xarray.DataArray | None,
+        sweep: xarray.Dataset,
     ) -> None:
         self.sweep = sweep
         self.design = [str(name) for name in slack.dims if name not in (MEASURE, PERIOD, GAIN)]
@@ -86,7 +93,9 @@ class _Planes:
     def slowest(self) -> Decision | None:
         """The slowest period over all designs; ties go to the design with more slack there."""
         found = [(slowest_period(plane, self.period), index) for index, plane in enumerate(self.least)]
-        held = [(edge, self.least[index][edge[1], edge[2]], index) for edge, index in found if edge is not None]
+        held = [
+            (edge, self.least[index][edge[1], edge[2]], index) for edge, index in found if edge is not None
+        ]
         if not held:
             return None
         (period, row, column), _, design = max(held, key=lambda one: (one[0][0], one[1]))
@@ -149,7 +158,9 @@ def answer_in_words(decision: Decision) -> str:
         sentences.append("Even the nominal plant alone holds everything nowhere.")
     else:
         reach = "to the end of the axis, " if nominal["at_axis_end"] else ""
-        sentences.append(f"The nominal plant alone would allow {reach}{_period(decision, nominal['period'])}.")
+        sentences.append(
+            f"The nominal plant alone would allow {reach}{_period(decision, nominal['period'])}."
+        )
     if decision["unknown_points"]:
         sentences.append(
             f"{decision['unknown_points']} of {decision['points']} points are unknown and count as not feasible."
@@ -182,7 +193,11 @@ def _nowhere(decision: Decision) -> list[str]:
     nearest = decision["nearest"]
     if nearest is None:
         return [*sentences, "Every point is unknown."]
-    missing = "" if np.isneginf(nearest["least_slack"]) else f" by {-100 * nearest['least_slack']:.3g} % of its scale"
+    missing = (
+        ""
+        if np.isneginf(nearest["least_slack"])
+        else f" by {-100 * nearest['least_slack']:.3g} % of its scale"
+    )
     return [
         *sentences,
         f"The nearest is period {_period(decision, nearest['period'])}, gain {_gain(decision, nearest['gain'])}"
@@ -199,7 +214,10 @@ def _gain(decision: Decision, value: float) -> str:
 
 
 def _design(decision: Decision, place: Decision) -> str:
-    parts = [f"{name} = {format_quantity(value, decision['units'][name])}" for name, value in place["design"].items()]
+    parts = [
+        f"{name} = {format_quantity(value, decision['units'][name])}"
+        for name, value in place["design"].items()
+    ]
     return f" with {', '.join(parts)}" if parts else ""
 
 

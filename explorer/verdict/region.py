@@ -30,7 +30,9 @@ def slowest_period(slack: Real, period: Real) -> tuple[float, int, int] | None:
     columns = np.flatnonzero(slack[row] >= 0)
     if row == len(period) - 1:
         return float(period[row]), row, int(columns[slack[row, columns].argmax()])
-    edges = np.array([crossing(period[row], period[row + 1], slack[row, g], slack[row + 1, g]) for g in columns])
+    edges = np.array(
+        [crossing(period[row], period[row + 1], slack[row, g], slack[row + 1, g]) for g in columns]
+    )
     best = np.lexsort((slack[row, columns], edges))[-1]
     return float(edges[best]), row, int(columns[best])
 

@@ -53,7 +53,9 @@ def judge(dataset: xarray.Dataset, limits: Limits | None = None) -> xarray.Datas
     arrays = {
         "slack": worst,
         "least_slack": least,
-        "binding": np.where(unknown, -1, np.where(np.isnan(worst), np.inf, worst).argmin(axis=0)).astype(np.int32),
+        "binding": np.where(unknown, -1, np.where(np.isnan(worst), np.inf, worst).argmin(axis=0)).astype(
+            np.int32
+        ),
         "feasible": ~unknown & (least >= 0),
         "nominal_slack": nominal,
         "limit": np.stack([one.limits(period) for one in requirements]),
@@ -61,7 +63,9 @@ def judge(dataset: xarray.Dataset, limits: Limits | None = None) -> xarray.Datas
         "scenario_scale": dataset["scenario_scale"].values,
     }
     others = tuple(axis.name for axis in study.design)
-    variables = {name: (dims_of(VERDICT[name], others), array, _attributes(name)) for name, array in arrays.items()}
+    variables = {
+        name: (dims_of(VERDICT[name], others), array, _attributes(name)) for name, array in arrays.items()
+    }
     coordinates = {name: value for name, value in dataset.coords.items() if PARAMETER not in value.dims}
     attributes = dict(dataset.attrs) | {"limits": _stated(requirements)}
     return xarray.Dataset(variables, coordinates, attributes)
@@ -120,5 +124,3 @@ def _stated(requirements: tuple[Requirement, ...]) -> str:
         limit = "1" if one.sense == "below" else f"{one.limit:.12g} {unit}".removesuffix(" 1")
         lines.append(f"{one.name}: {one.sense} {limit}")
     return "\n".join(lines)
-
-

@@ -52,13 +52,16 @@ def understood(study: Study, scenarios: Scenarios, needed: Estimate) -> dict[str
             for axis in (study.gain, study.period, *study.design)
         },
         "requirements": [
-            {"name": one.name, "measure": one.measure.key, "sense": one.sense, "limit": None if one.sense == "below" else one.limit,
+            {"name": one.name, "measure": one.measure.key, "sense": one.sense,
+             "limit": None if one.sense == "below" else one.limit,
              "unit": "samples" if one.in_samples else unit_in(one.measure, study.time_unit)}
             for one in study.requirements
         ],
         "scenarios": {
             "count": len(scenarios.scale),
-            "by_scale": {f"{scale:g}": int((scenarios.scale <= scale).sum()) for scale in study.scenarios.tolerance_scales},
+            "by_scale": {
+                f"{scale:g}": int(scenarios.within(scale).sum()) for scale in study.scenarios.tolerance_scales
+            },
             "note": scenarios.note,
         },
         "assumptions": list(study.assumptions),
@@ -74,16 +77,23 @@ def echo(study: Study, facts: dict[str, Any]) -> str:
     plant = facts["plant"]
     lines = [study.title, ""]
     lines += _block("Plant", [f"in {plant['variable']}: {plant['transfer']}"])
-    lines += _block("  nominal poles", [_complex(pole, plant["pole_unit"]) for pole in plant["nominal_poles"]] or ["none"])
-    lines += _block("  nominal zeros", [_complex(zero, plant["pole_unit"]) for zero in plant["nominal_zeros"]] or ["none"])
+    lines += _block(
+        "  nominal poles", [_complex(pole, plant["pole_unit"]) for pole in plant["nominal_poles"]] or ["none"]
+    )
+    lines += _block(
+        "  nominal zeros", [_complex(zero, plant["pole_unit"]) for zero in plant["nominal_zeros"]] or ["none"]
+    )
     lines += _block("Parameters", [_parameter(study, one.name) for one in study.parameters] or ["none"])
     lines += _block("Loop", _loop(study))
     lines += _block("Axes", [_axis(axis) for axis in (study.gain, study.period, *study.design)])
     lines += _block("Requirements", [_requirement(study, one) for one in study.requirements])
     counts = ", ".join(f"{count} at scale {scale}" for scale, count in facts["scenarios"]["by_scale"].items())
-    lines += _block("Scenarios", [counts, *([facts["scenarios"]["note"]] if facts["scenarios"]["note"] else [])])
+    lines += _block(
+        "Scenarios", [counts, *([facts["scenarios"]["note"]] if facts["scenarios"]["note"] else [])]
+    )
     lines += _block("Assumed", facts["assumptions"] or ["nothing"])
-    needed = f"{facts['loops']} closed loops, about {_duration(facts['estimated_seconds'])} and {_size(facts['estimated_memory_bytes'])} here"
+    time, memory = _duration(facts["estimated_seconds"]), _size(facts["estimated_memory_bytes"])
+    needed = f"{facts['loops']} closed loops, about {time} and {memory} here"
     return "\n".join(lines + _block("Sweep", [needed]))
 
 
@@ -92,10 +102,14 @@ def _poles_and_zeros(study: Study) -> tuple[NDArray[np.complex128], NDArray[np.c
     try:
         if study.plant.transfer is None:
             realisation = realise(study, values)
-            return realisation.poles[0], _pencil_zeros(realisation.state[0], realisation.start[0], realisation.output[0], realisation.direct[0])
+            return realisation.poles[0], _pencil_zeros(
+                realisation.state[0], realisation.start[0], realisation.output[0], realisation.direct[0]
+            )
         transfer = rational_in(study.plant.transfer, study.plant.variable, [1.0, 0.0], values)
         factors = [polynomial_roots(factor[0]) for factor in transfer.denominator_factors()]
-        return np.concatenate([*factors, np.zeros(0, complex)]), polynomial_roots(_stripped(transfer.numerator()[0, 0]))
+        return np.concatenate([*factors, np.zeros(0, complex)]), polynomial_roots(
+            _stripped(transfer.numerator()[0, 0])
+        )
     except ExpressionError as error:
         raise fault_in(study, ("plant", "transfer"), study.plant.text, error) from None
 
@@ -124,7 +138,12 @@ def _block(title: str, rows: list[str]) -> list[str]:
 
 def _complex(value: list[float], unit: str) -> str:
     real, imaginary = value
-    number = f"{real:.6g}" if imaginary == 0 else f"{real:.6g} {'+' if imaginary > 0 else '-'} {abs(imaginary):.6g}j"
+    real += 0.0  # no minus zero
+    number = (
+        f"{real:.6g}"
+        if imaginary == 0
+        else f"{real:.6g} {'+' if imaginary > 0 else '-'} {abs(imaginary):.6g}j"
+    )
     return number if unit == "1" else f"{number} {unit}"
 
 
@@ -134,7 +153,9 @@ def _parameter(study: Study, name: str) -> str:
     if one.variants:
         return f"{nominal}, or {', '.join(format_quantity(value, one.unit) for value in one.variants[1:])}"
     if one.varies:
-        return f"{nominal}, from {format_quantity(one.low, one.unit)} to {format_quantity(one.high, one.unit)}"
+        return (
+            f"{nominal}, from {format_quantity(one.low, one.unit)} to {format_quantity(one.high, one.unit)}"
+        )
     return f"{nominal}, exact"
 
 

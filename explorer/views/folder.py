@@ -11,7 +11,14 @@ from typing import Any, NamedTuple
 import xarray
 
 from explorer.errors import RunError
-from explorer.sweeping.store import DECISION_FILE, SWEEP_FILE, VERDICT_FILE, read_dataset, write_dataset, write_whole
+from explorer.sweeping.store import (
+    DECISION_FILE,
+    SWEEP_FILE,
+    VERDICT_FILE,
+    read_dataset,
+    write_dataset,
+    write_whole,
+)
 from explorer.verdict.decisions import decide
 from explorer.verdict.slack import judge
 from explorer.views.maps import region_map, slack_map, slack_sheet
@@ -39,7 +46,9 @@ def write_answer(folder: Path, sweep: xarray.Dataset, limits: Mapping[str, str] 
     return Run(verdict, decision)
 
 
-def draw(folder: Path, show: str | None, tolerance_scale: float, design: Mapping[str, float], kind: str) -> Path:
+def draw(
+    folder: Path, show: str | None, tolerance_scale: float, design: Mapping[str, float], kind: str
+) -> Path:
     """Draw the region (show None) or one field of a run as it was last judged; returns the picture's path."""
     run = read_run(folder)
     if show is None:
@@ -65,5 +74,7 @@ def read_run(folder: Path) -> Run:
     try:
         decision = json.loads(file.read_text(encoding="utf-8"))
     except (OSError, ValueError):
-        raise RunError(f"{file}: missing or damaged. Run `explorer judge {folder}` to write it again.") from None
+        raise RunError(
+            f"{file}: missing or damaged. Run `explorer judge {folder}` to write it again."
+        ) from None
     return Run(verdict, decision)

@@ -1,4 +1,4 @@
-"""Words and numbers on a map, put where they hide nothing: drawn lines and areas in, placed texts for maps out."""
+"""Words and numbers on a map, where they hide nothing: lines and areas in, placed texts for maps out."""
 
 from __future__ import annotations
 
@@ -21,8 +21,8 @@ class Clearing:
 
     def __init__(self, axes: Axes) -> None:
         self.axes = axes
-        width, height = axes.figure.get_size_inches() * axes.get_position().size
-        self.inches: Floats = np.array([width, height])
+        page: Any = axes.figure
+        self.inches: Floats = page.get_size_inches() * axes.get_position().size
         self._boxes: dict[str, Floats] = {}
 
     def shares(self, points: Any) -> Floats:
@@ -44,9 +44,9 @@ class Clearing:
         """What is no longer in the way."""
         self._boxes.pop(key, None)
 
-    def half_size(self, text: str, size: float) -> Floats:
-        """Half the width and height of a text in shares; a letter is about 0.6 of its size wide."""
-        return np.array([0.3 * len(text) + 0.35, 0.75]) * size / 72 / self.inches
+    def half_size(self, text: str, size: float, bold: bool = False) -> Floats:
+        """Half the width and height of a text in shares; a letter is 0.6 sizes wide, a bold one 0.74."""
+        return np.array([(0.37 if bold else 0.3) * len(text) + 0.35, 0.75]) * size / 72 / self.inches
 
     def best(self, candidates: Floats, half: Floats, but: str = "") -> tuple[int, float]:
         """The candidate (n, 2) in shares with the most room for a box, and that room.
@@ -66,11 +66,11 @@ class Clearing:
 
 
 def label_marks(clearing: Clearing, points: Mapping[str, Mark]) -> None:
-    """A word beside each point of the decision; where it fits nowhere near, further off with a line to the point."""
+    """A word beside each point of the decision; where none fits, further off with a line to the point."""
     for kind, mark in points.items():
         text = "slowest period" if kind == "slowest" else kind
-        half = clearing.half_size(text, 13)
-        ring = np.array([10.0, 11.0]) / 72 / clearing.inches  # the mark is about 7 points wide; stay clear of it
+        half = clearing.half_size(text, 13, bold=True)
+        ring = np.array([10.0, 11.0]) / 72 / clearing.inches  # clear of the mark itself
         if kind == "slowest":
             spot = clearing.shares((mark.period, clearing.axes.get_ylim()[0]))[0] + (0, 1.6 * half[1])
             rings = [np.array([[1.0, 0.0], [-1.0, 0.0]])]
@@ -90,8 +90,8 @@ def label_marks(clearing: Clearing, points: Mapping[str, Mark]) -> None:
 
 def label_contours(clearing: Clearing, contours: Any) -> None:
     """The value of each line of equal slack, on the line, where it fits between the others."""
-    drawn = [(level, path.vertices) for level, path in zip(contours.levels, contours.get_paths(), strict=True)]
-    drawn = [(level, points) for level, points in drawn if len(points)]
+    paths = zip(contours.levels, contours.get_paths(), strict=True)
+    drawn = [(level, path.vertices) for level, path in paths if len(path.vertices)]
     for level, points in drawn:
         clearing.take(f"slack {level}", points)
     for level, points in drawn:
@@ -100,8 +100,8 @@ def label_contours(clearing: Clearing, contours: Any) -> None:
         candidates = clearing.shares(points[:: -(-len(points) // 100)])
         index, room = clearing.best(candidates, half, but=f"slack {level}")
         if room > 0.9:
-            glow = style.halo(style.MET[-1], 2.4)
-            _write(clearing, candidates[index], text, half, f"value {text}", size=11, color="white", path_effects=glow)
+            look = {"size": 11, "color": "white", "path_effects": style.halo(style.MET[-1], 2.4)}
+            _write(clearing, candidates[index], text, half, f"value {text}", **look)
 
 
 def tag_edges(clearing: Clearing, vertices: Mapping[int, Floats]) -> None:
@@ -113,34 +113,34 @@ def tag_edges(clearing: Clearing, vertices: Mapping[int, Floats]) -> None:
         best, _ = clearing.best(candidates, half, but=f"edge {index}")
         color = style.stroke(index).line
         disc = {"boxstyle": "circle,pad=0.22", "facecolor": "white", "edgecolor": color, "linewidth": 1.4}
-        _write(clearing, candidates[best], str(index + 1), half, f"tag {index + 1}", size=11, weight="bold", color=color,
-               bbox=disc)  # fmt: skip
+        look = {"size": 11, "weight": "bold", "color": color, "bbox": disc}
+        _write(clearing, candidates[best], str(index + 1), half, f"tag {index + 1}", **look)
 
 
 def name_areas(clearing: Clearing, plane: Plane, where: npt.NDArray[np.bool_]) -> None:
-    """Name each binding area within `where` (gain, period): number and name if they fit, the number if only it does."""
+    """Name each binding area within `where` (gain, period): number and name, or the number if need be."""
     for index, requirement in enumerate(plane.requirements):
-        look = style.stroke(index)
-        box = {"boxstyle": "round,pad=0.25", "facecolor": look.tint, "edgecolor": "none"}
+        box = {"boxstyle": "round,pad=0.25", "facecolor": style.stroke(index).tint, "edgecolor": "none"}
+        look = {"size": 13, "color": style.stroke(index).line, "bbox": box, "zorder": 8}
         for text in (f"{index + 1}  {requirement.name}", str(index + 1)):
             half = clearing.half_size(text, 13)
             spot = _inside(clearing, plane, (plane.binding == index) & where, half)
             if spot is not None:
-                _write(clearing, spot, text, half, f"area {index + 1}", size=13, color=look.line, bbox=box, zorder=8)
+                _write(clearing, spot, text, half, f"area {index + 1}", **look)
                 break
 
 
 def name_region(clearing: Clearing, plane: Plane) -> None:
     """Say in the region that all requirements hold there, if there is room."""
     for text in ("all requirements hold", "all hold"):
-        half = clearing.half_size(text, 13)
+        half = clearing.half_size(text, 13, bold=True)
         spot = _inside(clearing, plane, plane.feasible, half)
         if spot is not None:
             _write(clearing, spot, text, half, "region", size=13, weight="bold", color=style.INK)
             break
 
 
-def say_empty(axes: Axes, plane: Plane) -> None:
+def say_empty(clearing: Clearing, plane: Plane) -> None:
     """Say in words that nothing holds, and whether that is known."""
     if plane.unknown.all():
         words = "Nothing is known here: no point could be judged."
@@ -148,14 +148,14 @@ def say_empty(axes: Axes, plane: Plane) -> None:
         words = "No point is known to meet every requirement."
     else:
         words = "Nowhere do all requirements hold at once."
-    axes.text(
-        0.5, 0.93, words, transform=axes.transAxes, size=16, weight="bold", color=style.INK, ha="center", va="center",
-        zorder=12, gid="empty", bbox={"boxstyle": "round,pad=0.5", "facecolor": "white", "edgecolor": style.INK},
-    )  # fmt: skip
+    box = {"boxstyle": "round,pad=0.5", "facecolor": "white", "edgecolor": style.INK}
+    half = clearing.half_size(words, 16, bold=True) * (1.0, 1.4)
+    look = {"size": 16, "weight": "bold", "color": style.INK, "bbox": box}
+    _write(clearing, np.array([0.5, 0.93]), words, half, "empty", **look)
 
 
 def _inside(clearing: Clearing, plane: Plane, mask: npt.NDArray[np.bool_], half: Floats) -> Floats | None:
-    """The roomiest place (2,) in shares within the points of a mask (gain, period); None when the box fits nowhere."""
+    """The roomiest place (2,) in shares within a mask (gain, period); None when the box fits nowhere."""
     step = tuple(slice(None, None, -(-size // 36)) for size in mask.shape)
     gain, period = np.meshgrid(plane.gain.values, plane.period.values, indexing="ij")
     points = np.column_stack([period[step].ravel(), gain[step].ravel()])
@@ -171,12 +171,11 @@ def _inside(clearing: Clearing, plane: Plane, mask: npt.NDArray[np.bool_], half:
     return candidates[index] if room >= 1 else None
 
 
-def _write(
-    clearing: Clearing, spot: Floats, text: str, half: Floats, gid: str, zorder: float = 11, **look: Any
-) -> None:
+def _write(clearing: Clearing, spot: Floats, text: str, half: Floats, gid: str, **given: Any) -> None:
     """Put a centred text at a place in shares, and keep that place."""
-    look = {"path_effects": [] if "bbox" in look else style.halo(width=4.0)} | look
-    axes = clearing.axes
-    axes.text(*spot, text, transform=axes.transAxes, ha="center", va="center", zorder=zorder, gid=gid,
-              parse_math=False, **look)  # fmt: skip
+    look: dict[str, Any] = {"ha": "center", "va": "center", "zorder": 11, "parse_math": False}
+    if "bbox" not in given:
+        look["path_effects"] = style.halo(width=4.0)
+    x, y = spot
+    clearing.axes.text(float(x), float(y), text, transform=clearing.axes.transAxes, gid=gid, **(look | given))
     clearing.keep(gid, spot, half)

@@ -35,9 +35,9 @@ def slack_lines(plane: Plane, points: Mapping[str, Mark], chosen: Sequence[int] 
     for index, row in zip(shown, rows, strict=True):
         look = style.stroke(index)
         every = max(1, axis.values.size // 12)
-        line = {
-            "color": look.line, "linestyle": look.dashes, "linewidth": 2.2, "marker": look.marker, "markersize": 7,
-            "markerfacecolor": "white", "markeredgewidth": 1.6,
+        line: dict[str, Any] = {
+            "color": look.line, "linestyle": look.dashes, "linewidth": 2.2, "marker": look.marker,
+            "markersize": 7, "markerfacecolor": "white", "markeredgewidth": 1.6,
         }  # fmt: skip
         start = (index * every // max(1, len(shown))) % every
         drawn = np.clip(row, low - 2.0, high + 2.0)
@@ -45,7 +45,7 @@ def slack_lines(plane: Plane, points: Mapping[str, Mark], chosen: Sequence[int] 
         text = f"{index + 1}  {plane.requirements[index].full}"
         entries.append(style.Entry(text, (Line2D([], [], **line),)))
     if not plane.feasible.any():
-        labels.say_empty(axes, plane)
+        labels.say_empty(labels.Clearing(axes), plane)
         high += 0.17 * (high - low)  # room for the words above the lines
     axes.set_ylim(low, high)
     axes.set_ylabel("slack, as a share of the limit", fontsize=14, color=style.INK, labelpad=7)
@@ -56,37 +56,40 @@ def slack_lines(plane: Plane, points: Mapping[str, Mark], chosen: Sequence[int] 
 def share_lines(plane: Plane, share: Floats) -> Figure:
     """Share of scenarios that meet every requirement, in percent, against the swept axis."""
     axis, fixed = _axes_of(plane)
-    heading = f"Share of scenarios that meet every requirement, within {plane.box}, at {fixed}"
+    heading = f"Share of scenarios that meet the study's own limits, within {plane.box}, at {fixed}"
     figure, axes = _new_lines(plane, heading, axis)
     entries = _spans(axes, axis, plane.least.ravel())
-    look = {"color": style.MET[-1], "linewidth": 2.4, "marker": "o", "markersize": 5}
+    look: dict[str, Any] = {"color": style.MET[-1], "linewidth": 2.4, "marker": "o", "markersize": 5}
     axes.plot(axis.values, 100 * share.ravel(), zorder=5, gid="share", **look)
     axes.set_ylim(-3.0, 103.0)
     axes.set_ylabel("scenarios that meet everything [%]", fontsize=14, color=style.INK, labelpad=7)
-    style.add_legend(figure, [*entries, style.Entry("share of scenarios", (Line2D([], [], **look),))], *_LEGEND, room=410)
+    entries.append(style.Entry("share of scenarios", (Line2D([], [], **look),)))
+    style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
 
 def spans(values: Floats, least: Floats) -> list[tuple[float, float]]:
-    """Where the least slack is at least 0: (from, to) in the axis' unit, ends found between the points by a line.
+    """Where the least slack is at least 0: (from, to) in the axis' unit, ends by a line between points.
 
-    Next to an unknown point a span ends at the last known one.
+    Next to an unknown or infinite point a span ends at the last point that holds.
     """
-    found = []
-    bounded = np.clip(least, -2.0, 2.0)  # an infinite neighbour must not pull the end onto itself
     held = least >= 0  # False for NaN
     starts = np.flatnonzero(held & ~np.append(False, held[:-1]))
     stops = np.flatnonzero(held & ~np.append(held[1:], False))
-    for first, last in zip(starts, stops, strict=True):
-        found.append((_end(values, bounded, first, first - 1), _end(values, bounded, last, last + 1)))
-    return found
+    return [
+        (_end(values, least, first, first - 1), _end(values, least, last, last + 1))
+        for first, last in zip(starts.tolist(), stops.tolist(), strict=True)
+    ]
 
 
 def _end(values: Floats, least: Floats, inside: int, outside: int) -> float:
-    if not 0 <= outside < values.size or np.isnan(least[outside]):
-        return float(values[inside])
-    part = least[inside] / (least[inside] - least[outside])
-    return float(values[inside] + part * (values[outside] - values[inside]))
+    """The crossing of 0 as the drawn line has it: on a logarithmic axis by ratios."""
+    near = float(values[inside])
+    if not 0 <= outside < values.size or not np.isfinite(least[[inside, outside]]).all():
+        return near
+    part = float(least[inside] / (least[inside] - least[outside]))
+    far = float(values[outside])
+    return near * (far / near) ** part if values.min() > 0 else near + part * (far - near)
 
 
 def _axes_of(plane: Plane) -> tuple[Axis, str]:
@@ -118,8 +121,8 @@ def _spans(axes: Axes, axis: Axis, least: Floats) -> list[style.Entry]:
         axes.axvspan(low, high, facecolor=style.MET[0], linewidth=0, zorder=1, gid="all hold")
         for end in (low, high):
             axes.axvline(end, color=style.MET[3], linewidth=1.6, zorder=2)
-        text = f"all hold: {axis.words(low)} to {axis.words(high)}"
-        entries.append(style.Entry(text, style.swatch(style.MET[0])))
+        span = f": about {axis.words(low)} to {axis.words(high)}" if high > low else f" at {axis.words(low)}"
+        entries.append(style.Entry(f"all hold{span}", style.swatch(style.MET[0])))
     unknown = np.isnan(least)
     if unknown.any():
         _unknown_spans(axes, axis, unknown)
@@ -133,7 +136,7 @@ def _unknown_spans(axes: Axes, axis: Axis, unknown: Any) -> None:
     last = axis.values.size - 1
     starts = np.flatnonzero(unknown & ~np.append(False, unknown[:-1]))
     stops = np.flatnonzero(unknown & ~np.append(unknown[1:], False))
-    for first, end in zip(starts, stops, strict=True):
+    for first, end in zip(starts.tolist(), stops.tolist(), strict=True):
         low, high = axis.values[max(first - 1, 0)], axis.values[min(end + 1, last)]
         span = axes.axvspan(low, high, linewidth=0, zorder=3, gid="unknown")
         span.set(facecolor=style.UNKNOWN, edgecolor=style.UNKNOWN_HATCH, hatch="xx")
@@ -148,9 +151,8 @@ def _marks(axes: Axes, axis: Axis, plane: Plane, points: Mapping[str, Mark]) -> 
         if kind == "slowest" and axis is plane.gain:
             continue
         at = mark.gain if axis is plane.gain else mark.period
-        look = {"color": style.INK, "linewidth": 1.6, "linestyle": looks[kind]}
+        look: dict[str, Any] = {"color": style.INK, "linewidth": 1.6, "linestyle": looks[kind]}
         axes.axvline(at, zorder=6, gid=kind, **look)
-        word = {"nearest": "nearest to holding", "slowest": "slowest period"}.get(kind, kind)
+        word = "slowest period" if kind == "slowest" else kind
         entries.append(style.Entry(f"{word}: {mark.text}", (Line2D([], [], **look),)))
     return entries
-

@@ -1,4 +1,4 @@
-"""Maps of gain against sample period: a verdict and a decision in, Figures for the commands and the sheet out.
+"""Maps of gain against sample period: a verdict and a decision in, Figures for folder and the commands out.
 
 With one period or one gain there is no plane: the same question is then answered by lines (see lines).
 """
@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Mapping
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -19,7 +20,7 @@ from matplotlib.lines import Line2D
 
 from explorer.errors import OptionError
 from explorer.views import labels, layers, lines, style
-from explorer.views.plane import Floats, Mark, Plane, Requirement, marks, outline_at, share_at, take_plane
+from explorer.views.plane import Floats, Mark, Plane, Requirement, marks, nominal_plane, share_at, take_plane
 
 _MAP = (style.LEFT, 0.135, 0.585, 0.715)
 _LEGEND = (0.69, 0.85)
@@ -35,8 +36,8 @@ def region_map(
 ) -> Figure:
     """Where every requirement holds, each requirement's edge, what binds outside, and the decision's points.
 
-    The nominal plant's outline is drawn too where the verdict has tolerance scale 0. NaN is drawn as unknown, and
-    an empty region is said in words. Of further design variables, `design` = {name: SI value} chooses the slice.
+    The nominal plant's region is outlined too. NaN is drawn as unknown, an empty region is said in words. Of
+    further design variables, `design` = {name: SI value} chooses the slice; by default the recommended one.
     Raises OptionError when the scale or the design was not swept.
     """
     plane = take_plane(verdict, tolerance_scale, design, decision)
@@ -44,17 +45,17 @@ def region_map(
     if _is_line(plane):
         return lines.slack_lines(plane, points)
     figure, axes = _new_map(plane, f"All requirements over {plane.box}")
-    nominal = outline_at(verdict, plane, 0.0) if plane.tolerance_scale else None
-    style.add_legend(figure, draw_region(axes, plane, points, nominal), *_LEGEND, room=410)
+    entries = draw_region(axes, plane, points, nominal_plane(verdict, plane))
+    style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
 
 def draw_region(
-    axes: Axes, plane: Plane, points: Mapping[str, Mark], nominal: Floats | None = None
+    axes: Axes, plane: Plane, points: Mapping[str, Mark], nominal: Plane | None = None
 ) -> list[style.Entry]:
     """The region map's data on axes that `layers.prepare` has set up; returns the entries of its legend.
 
-    `nominal` (gain, period) is the nominal plant's least slack, to be outlined.
+    `nominal` is the same slice for the nominal plant; its region is outlined.
     """
     held = layers.known_ground(axes, plane)
     areas = layers.binding_areas(axes, plane)
@@ -63,18 +64,20 @@ def draw_region(
     clearing = _clearing(axes, plane, points)
     for index, vertices in edges.items():
         clearing.take(f"edge {index}", vertices)
-    if nominal is not None and (outline := layers.nominal_outline(axes, plane, nominal)):
+    if nominal is not None and (outline := layers.nominal_outline(axes, nominal)):
         entries.append(outline[0])
         clearing.take("nominal", outline[1])
-    entries += layers.draw_marks(axes, plane, points)
+    entries += layers.draw_marks(axes, points)
+    if not plane.feasible.any():
+        labels.say_empty(clearing, plane)
     labels.label_marks(clearing, points)
     if contours is not None:
         labels.label_contours(clearing, contours)
     labels.tag_edges(clearing, edges)
     labels.name_areas(clearing, plane, ~plane.feasible)
-    if not plane.feasible.any():
-        labels.say_empty(axes, plane)
-    requirements = [_requirement_entry(plane, index, index in edges, areas) for index in range(len(plane.slack))]
+    requirements = [
+        _requirement_entry(plane, index, index in edges, areas) for index in range(len(plane.slack))
+    ]
     return [*entries, style.Entry("Edges, and what binds outside"), *requirements, *held]
 
 
@@ -88,28 +91,24 @@ def slack_map(
 ) -> Figure:
     """One field over the plane: `show` is "slack" (the least), "binding", "share" or a requirement's name.
 
-    A requirement that carries one of those three names is reached by them no longer. "share" needs the sweep's
-    Dataset. Slack beyond ±1, infinities included, takes the end colours. Raises OptionError for any other `show`.
+    "share" needs the sweep's Dataset, and goes by the study's own limits, whatever the verdict was judged by.
+    Slack beyond ±1, infinities included, takes the end colours. Raises OptionError for any other `show`.
     """
     plane = take_plane(verdict, tolerance_scale, design, decision)
     points = marks(plane, decision)
     names = [requirement.name for requirement in plane.requirements]
-    if show not in ("slack", "binding", "share", *names):
-        raise OptionError(f"nothing called {show!r} to show; there are: {', '.join(('slack', 'binding', 'share', *names))}")
+    allowed = ("slack", "binding", "share", *names)
+    if show not in allowed:
+        raise OptionError(f"nothing called {show!r} to show; there are: {', '.join(allowed)}")
     if show == "share":
         if sweep is None:
             raise OptionError("the share of scenarios is in the sweep, not in the verdict: give both")
         return _share_map(plane, share_at(sweep, plane), points)
     if _is_line(plane):
-        chosen = (names.index(show),) if show in names else None
-        return lines.slack_lines(plane, points, chosen)
+        return lines.slack_lines(plane, points, (names.index(show),) if show in names else None)
     if show == "binding":
         return _binding_map(plane, points)
-    if show == "slack":
-        return _field_map(plane, plane.least, f"Least slack of all requirements over {plane.box}", points)
-    index = names.index(show)
-    heading = f"Worst slack of {_once(plane.requirements[index])}, over {plane.box}"
-    return _field_map(plane, plane.slack[index], heading, points)
+    return _field_map(plane, points, names.index(show) if show in names else None)
 
 
 def slack_sheet(
@@ -118,11 +117,13 @@ def slack_sheet(
     design: Mapping[str, float] | None = None,
     decision: Mapping[str, Any] | None = None,
 ) -> Figure:
-    """Every requirement's slack in a panel of its own, one colour scale; the common region outlined in each."""
+    """Every requirement's slack in a panel of its own, one colour scale; the region outlined in each."""
     plane = take_plane(verdict, tolerance_scale, design, decision)
     if _is_line(plane):
         return lines.slack_lines(plane, marks(plane, decision))
-    figure = style.new_figure(plane.title, _subtitle(plane, f"Slack of each requirement over {plane.box}"), plane.provenance)
+    heading = f"Slack of each requirement over {plane.box}; outlined: where all hold"
+    heading += "; hatched: unknown" if plane.unknown.any() else ""
+    figure = style.new_figure(plane.title, _subtitle(plane, heading), plane.provenance)
     count = len(plane.requirements)
     columns = int(np.ceil(np.sqrt(count)))
     for index in range(count):
@@ -145,24 +146,34 @@ def _panel(figure: Figure, plane: Plane, index: int, columns: int) -> None:
     layers.signed_field(axes, plane, plane.slack[index])
     layers.zero_line(axes, plane, plane.least, colors="white", linewidths=3.6)
     layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=1.6)
-    title = textwrap.shorten(f"{index + 1}  {_once(plane.requirements[index])}", 112 // columns, placeholder=" …")
-    axes.set_title(title, loc="left", size=11, color=style.INK, parse_math=False)
+    room = int((across - 0.045) * 150)  # letters of 11 points in the panel's width
+    named = f"{index + 1}  {_once(plane.requirements[index])}"
+    if len(named) > room:
+        named = textwrap.shorten(f"{index + 1} {plane.requirements[index].name}", room, placeholder=" …")
+    axes.set_title(named, loc="left", size=11, color=style.INK, parse_math=False)
     if column:
         axes.set_ylabel("")
     if index + columns < count:
         axes.set_xlabel("")
 
 
-def _field_map(plane: Plane, field: Floats, heading: str, points: Mapping[str, Mark]) -> Figure:
+def _field_map(plane: Plane, points: Mapping[str, Mark], index: int | None) -> Figure:
+    """The slack of requirement `index`, or the least of all for None."""
+    if index is None:
+        heading, field = f"Least slack of all requirements over {plane.box}", plane.least
+    else:
+        heading, field = f"Slack of {_once(plane.requirements[index])}, over {plane.box}", plane.slack[index]
     figure, axes = _new_map(plane, heading)
     held = layers.known_ground(axes, plane)
     layers.signed_field(axes, plane, field)
     layers.zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
     entries = [style.Entry("slack 0: the edge", (Line2D([], [], color=style.INK, linewidth=2.6),))]
-    if field is not plane.least and layers.zero_line(axes, plane, plane.least, colors="white", linewidths=1.4) is not None:
-        halo = Line2D([], [], color="white", linewidth=1.6, path_effects=style.halo(style.QUIET_INK, 3.0))
-        entries.append(style.Entry("where all requirements hold", (halo,)))
-    entries += layers.draw_marks(axes, plane, points) + held
+    if index is not None and plane.feasible.any():
+        layers.zero_line(axes, plane, plane.least, colors="white", linewidths=1.6)
+        outline = Line2D([], [], color="white", linewidth=1.6)
+        outline.set_path_effects(style.halo(style.QUIET_INK, 3.0))
+        entries.append(style.Entry("where all requirements hold", (outline,)))
+    entries += layers.draw_marks(axes, points) + held
     labels.label_marks(_clearing(axes, plane, points), points)
     _slack_bar(figure, _BAR)
     style.add_legend(figure, entries, _LEGEND[0], _BAR[1] - 0.06, room=200)
@@ -172,16 +183,17 @@ def _field_map(plane: Plane, field: Floats, heading: str, points: Mapping[str, M
 def _binding_map(plane: Plane, points: Mapping[str, Mark]) -> Figure:
     figure, axes = _new_map(plane, f"Which requirement has the least slack, over {plane.box}")
     held = layers.known_ground(axes, plane)
-    areas = layers.binding_areas(axes, plane)
     entries = [style.Entry("Least slack has")]
-    entries += [
-        style.Entry(f"{index + 1}  {plane.requirements[index].full}", layers.area_sample(index)) for index in sorted(areas)
-    ]
-    if layers.zero_line(axes, plane, plane.least, colors="white", linewidths=5.0) is not None:
+    for index in sorted(layers.binding_areas(axes, plane)):
+        text = f"{index + 1}  {plane.requirements[index].full}"
+        entries.append(style.Entry(text, layers.area_sample(index)))
+    clearing = _clearing(axes, plane, points)
+    outline = layers.zero_line(axes, plane, plane.least, colors="white", linewidths=5.0)
+    if outline is not None:
         layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=2.6)
         entries.append(style.Entry("edge of the region", (Line2D([], [], color=style.INK, linewidth=2.6),)))
-    entries += layers.draw_marks(axes, plane, points) + held
-    clearing = _clearing(axes, plane, points)
+        clearing.take("outline", layers.vertices(outline))
+    entries += layers.draw_marks(axes, points) + held
     labels.label_marks(clearing, points)
     labels.name_region(clearing, plane)
     labels.name_areas(clearing, plane, np.ones_like(plane.feasible))
@@ -192,16 +204,18 @@ def _binding_map(plane: Plane, points: Mapping[str, Mark]) -> Figure:
 def _share_map(plane: Plane, share: Floats, points: Mapping[str, Mark]) -> Figure:
     if _is_line(plane):
         return lines.share_lines(plane, share)
-    figure, axes = _new_map(plane, f"Share of scenarios that meet every requirement, within {plane.box}")
+    figure, axes = _new_map(plane, f"Share of scenarios that meet the study's own limits, within {plane.box}")
     held = layers.known_ground(axes, plane)
     layers.share_field(axes, plane, share)
-    entries = [style.Entry("edge: every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))]
-    entries += layers.draw_marks(axes, plane, points) + held
+    texts = [f"{low:.0%} to {high:.0%}" for low, high in pairwise(style.SHARE_LEVELS)] + ["all"]
+    shades = [
+        style.Entry(text.replace("%", " %"), style.swatch(color))
+        for text, color in zip(texts, style.SHARES, strict=True)
+    ]
+    edge = style.Entry("edge: every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))
+    entries = [style.Entry("Scenarios that meet everything"), *reversed(shades), edge]
+    entries += layers.draw_marks(axes, points) + held
     labels.label_marks(_clearing(axes, plane, points), points)
-    bands = [f"{low:.0%} to {high:.0%}" for low, high in zip(style.SHARE_LEVELS, style.SHARE_LEVELS[1:], strict=False)]
-    swatches = [style.swatch(color) for color in style.SHARES]
-    shades = [style.Entry(text.replace("%", " %"), artists) for text, artists in zip([*bands, "all"], swatches, strict=True)]
-    entries = [style.Entry("Scenarios that meet everything"), *reversed(shades), *entries]
     style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
@@ -238,7 +252,10 @@ def _slack_bar(figure: Figure, place: tuple[float, float, float, float]) -> None
     colors = ListedColormap([*style.MISSED, *style.MET])
     edges = [style.SLACK_LEVELS[0] - 1, *style.SLACK_LEVELS, style.SLACK_LEVELS[-1] + 1]
     bar = figure.colorbar(
-        ScalarMappable(BoundaryNorm(edges, colors.N), colors), cax=axes, spacing="uniform", ticks=style.SLACK_LEVELS
+        ScalarMappable(BoundaryNorm(edges, colors.N), colors),
+        cax=axes,
+        spacing="uniform",
+        ticks=style.SLACK_LEVELS,
     )
     bar.ax.set_yticklabels([style.plain(level).replace("-", "−") for level in style.SLACK_LEVELS], size=11)
     bar.ax.tick_params(length=0, labelcolor=style.INK)
@@ -246,14 +263,20 @@ def _slack_bar(figure: Figure, place: tuple[float, float, float, float]) -> None
     bar.ax.axhline(0.0, color=style.INK, linewidth=2.6)
     bar.outline.set_edgecolor(style.FRAME)
     for height, word in ((0.25, "missed"), (0.75, "met")):
-        bar.ax.text(4.0, height, word, transform=bar.ax.transAxes, size=11, color=style.INK, va="center", rotation=90)
+        bar.ax.text(
+            4.0, height, word, transform=bar.ax.transAxes, size=11, color=style.INK, va="center", rotation=90
+        )
 
 
 def _requirement_entry(plane: Plane, index: int, has_edge: bool, areas: set[int]) -> style.Entry:
     text = f"{index + 1}  {plane.requirements[index].full}"
     known = plane.slack[index][~np.isnan(plane.slack[index])]
     if not has_edge and known.size:
-        text += "\n    met everywhere here" if (known >= 0).all() else "\n    missed everywhere here"
+        met = known >= 0
+        where = (
+            "everywhere here" if met.all() else "wherever the loop is stable" if met.any() else "nowhere here"
+        )
+        text += f"\n    met {where}"
     artists = layers.area_sample(index) if index in areas else ()
     return style.Entry(text, (*artists, *layers.edge_sample(index)))
 

@@ -42,7 +42,8 @@ def summary_text(summary: dict[str, Any]) -> str:
         outside = ", ".join(f"{name} {count}" for name, count in row["binding_outside"].items() if count)
         stopped = f"; outside binds: {outside}" if outside else ""
         lines.append(
-            f"tolerances × {row['tolerance_scale']:g}: {row['feasible']} of {row['points']} points hold{unknown}{stopped}"
+            f"tolerances × {row['tolerance_scale']:g}: {row['feasible']} of {row['points']} points hold"
+            f"{unknown}{stopped}"
         )
     return "\n".join(lines)
 

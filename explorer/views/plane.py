@@ -1,11 +1,11 @@
-"""One slice of a verdict over gain and sample period: Datasets and a decision in, plain arrays and words for maps out."""
+"""One slice of a verdict over gain and period: Datasets and a decision in, arrays and words for maps out."""
 
 from __future__ import annotations
 
 import math
 import textwrap
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -50,7 +50,7 @@ class Requirement:
 
 @dataclass(frozen=True)
 class Mark:
-    """A point of the decision: where it lies in shown units, and in words; `window` is the gains that hold there."""
+    """A point of the decision, in shown units and in words; `window` is the gains that hold there."""
 
     period: float
     gain: float
@@ -88,7 +88,7 @@ class Plane:
     @property
     def feasible(self) -> npt.NDArray[np.bool_]:
         """(gain, period), True where every requirement is known to hold."""
-        return self.least >= 0  # False for NaN
+        return np.asarray(self.least >= 0)  # False for NaN
 
     def nearest(self) -> tuple[int, int] | None:
         """Row and column of the largest finite least slack; None when no point has one."""
@@ -116,7 +116,11 @@ def take_plane(
     least = np.asarray(cut["least_slack"], dtype=float)
     binding = np.asarray(cut["binding"], dtype=np.int64)
     design_at = {name: value for name, value in at.items() if name != "tolerance_scale"}
-    named = [f"{name} = {format_quantity(value, _unit(verdict[name]))}" for name, value in design_at.items()]
+    best = (decision or {}).get("recommended") or {}
+    named = [
+        _named(name, at[name], (best.get("design") or {}).get(name), _unit(verdict[name]))
+        for name in design_at
+    ]
     return Plane(
         period=_axis("sample period", verdict["period"]),
         gain=_axis("gain", verdict["gain"]),
@@ -133,14 +137,13 @@ def take_plane(
     )
 
 
-def outline_at(verdict: xr.Dataset, plane: Plane, tolerance_scale: float) -> Floats | None:
-    """(gain, period) least slack at another tolerance scale of the same slice; None when it was not swept."""
-    scales = np.asarray(verdict["tolerance_scale"], dtype=float)
-    there = np.flatnonzero(np.isclose(scales, tolerance_scale, atol=1e-12))
-    if not there.size:
+def nominal_plane(verdict: xr.Dataset, plane: Plane) -> Plane | None:
+    """The same slice for the nominal plant alone; None where this one is it or the verdict lacks it."""
+    if not plane.tolerance_scale or "nominal_slack" not in verdict:
         return None
-    cut = verdict["least_slack"].sel(plane.design).isel(tolerance_scale=int(there[0]))
-    return np.asarray(cut.transpose("gain", "period"), dtype=float)
+    cut = verdict["nominal_slack"].sel(plane.design).transpose("measure", "gain", "period")
+    slack = np.asarray(cut, dtype=float)
+    return replace(plane, slack=slack, least=slack.min(axis=0), binding=slack.argmin(axis=0))
 
 
 def share_at(sweep: xr.Dataset, plane: Plane) -> Floats:
@@ -160,7 +163,8 @@ def marks(plane: Plane, decision: Mapping[str, Any] | None) -> dict[str, Mark]:
     if decision and math.isclose(float(decided["tolerance_scale"]), plane.tolerance_scale, abs_tol=1e-12):
         best, slowest = decided.get("recommended"), decided.get("slowest_period")
         if best and _same_design(plane, best):
-            found["recommended"] = _mark(plane, best, f"least slack {_number(best['least_slack'])} ({best['binding']})")
+            text = f"least slack {_number(best['least_slack'])} ({best['binding']})"
+            found["recommended"] = _mark(plane, best, text)
         if slowest and _same_design(plane, slowest):
             found["slowest"] = _slowest(plane, slowest)
     if not plane.feasible.any() and (place := plane.nearest()):
@@ -178,6 +182,7 @@ def _mark(plane: Plane, point: Mapping[str, Any], text: str) -> Mark:
 
 
 def _slowest(plane: Plane, point: Mapping[str, Any]) -> Mark:
+    """The slowest period, refined between the grid's; its window of gains is that of the last grid period."""
     period, gain = point["period"] * plane.period.factor, point["gain"] * plane.gain.factor
     # Rounded down: a slower period than this one would not hold.
     digits = 3 - math.floor(math.log10(period))
@@ -191,17 +196,21 @@ def _point(plane: Plane, period: float, gain: float) -> str:
     return f"{plane.period.words(period)}, gain {plane.gain.words(gain)}"
 
 
-def _number(value: float) -> str:
-    return f"{value:.3g}"
+def _number(value: float | str) -> str:
+    return f"{float(value):.3g}"  # decision.json spells infinity as a word
 
 
 def _same_design(plane: Plane, point: Mapping[str, Any]) -> bool:
     """Whether the point's design is this slice's; a decision may leave out variables with one value."""
     there = point.get("design") or {}
-    return all(math.isclose(there.get(name, value), value, rel_tol=1e-9) for name, value in plane.design.items())
+    return all(
+        math.isclose(there.get(name, value), value, rel_tol=1e-9) for name, value in plane.design.items()
+    )
 
 
-def _design(verdict: xr.Dataset, wanted: Mapping[str, float], decision: Mapping[str, Any]) -> dict[str, float]:
+def _design(
+    verdict: xr.Dataset, wanted: Mapping[str, float], decision: Mapping[str, Any]
+) -> dict[str, float]:
     dims = verdict["least_slack"].dims
     others = [str(name) for name in dims if name not in ("tolerance_scale", "period", "gain")]
     if strange := [name for name in wanted if name not in others]:
@@ -209,8 +218,18 @@ def _design(verdict: xr.Dataset, wanted: Mapping[str, float], decision: Mapping[
         raise OptionError(f"{strange[0]!r} is no further design variable of this run; there are: {allowed}")
     point = decision.get("recommended") or decision.get("nearest") or {}
     chosen = {name: float(verdict[name][0]) for name in others}
-    chosen |= {name: value for name, value in (point.get("design") or {}).items() if name in chosen} | dict(wanted)
+    chosen |= {name: value for name, value in (point.get("design") or {}).items() if name in chosen} | dict(
+        wanted
+    )
     return {name: _on_axis(verdict, name, value) for name, value in chosen.items()}
+
+
+def _named(name: str, value: float, recommended: float | None, unit: str) -> str:
+    """A design variable's value in this slice, and the recommended one where that is another."""
+    text = f"{name} = {format_quantity(value, unit)}"
+    if recommended is None or math.isclose(recommended, value, rel_tol=1e-9):
+        return text
+    return f"{text} (recommended: {format_quantity(recommended, unit)})"
 
 
 def _on_axis(verdict: xr.Dataset, name: str, value: float) -> float:
@@ -229,17 +248,19 @@ def _unit(values: xr.DataArray) -> str:
 
 
 def _axis(name: str, values: xr.DataArray) -> Axis:
-    """Seconds are shown in the unit that suits the axis; other units stay, with a power of ten if they must."""
+    """Seconds are shown in the unit that suits the axis; others stay, with a power of ten if they must."""
     numbers, unit = np.asarray(values, dtype=float), _unit(values)
     middle = math.sqrt(float(numbers.min()) * float(numbers.max())) if numbers.min() > 0 else 1.0
     thousands = math.floor(math.log10(middle / 0.3) / 3)
     if unit == "s":
         step = min(max(thousands, -3), 0)
-        return Axis(numbers * 1000.0**-step, 1000.0**-step, f"{name} [{('s', 'ms', 'µs', 'ns')[-step]}]", unit)
+        return Axis(
+            numbers * 1000.0**-step, 1000.0**-step, f"{name} [{('s', 'ms', 'µs', 'ns')[-step]}]", unit
+        )
     shown = "samples" if unit == "sample" else unit
-    if -2 <= thousands <= 1:  # 0.0003 to 300000 in the middle: plain numbers can be read
+    if -1 <= thousands <= 1:  # 0.0003 to 300000 in the middle: plain numbers can be read
         return Axis(numbers, 1.0, f"{name} [{shown}]" if shown else name, unit)
-    power = f"10{str(3 * thousands).translate(str.maketrans('-0123456789', '⁻⁰¹²³⁴⁵⁶⁷⁸⁹'))}"
+    power = "10" + str(3 * thousands).translate(str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹"))
     label = f"{name} [{power} {shown}]" if shown not in ("", "1") else f"{name} [{power}]"
     return Axis(numbers * 1000.0**-thousands, 1000.0**-thousands, label, unit)
 
@@ -250,20 +271,22 @@ def _requirements(cut: xr.Dataset) -> tuple[Requirement, ...]:
         kind, unit = str(cut["measure_kind"].values[index]), str(cut["measure_unit"].values[index])
         limit = np.asarray(cut["limit"][index], dtype=float)
         sense = _SENSES[str(np.ravel(cut["sense"])[index])]
-        rows.append(Requirement(name, kind, _asks(kind, sense, limit, unit, np.asarray(cut["period"], dtype=float))))
+        rows.append(
+            Requirement(name, kind, _asks(kind, sense, limit, unit, np.asarray(cut["period"], dtype=float)))
+        )
     return tuple(rows)
 
 
 def _asks(kind: str, sense: str, limit: Floats, unit: str, period: Floats) -> str:
-    """"time to peak ≤ 120 ms"; a limit that grows with the period was stated in samples and is said so."""
-    if np.isnan(limit).any():
-        return f"{kind}: largest |z| < 1" if kind == "stability" else kind
+    """ "time to peak ≤ 120 ms"; a limit that grows with the period was stated in samples and is said so."""
+    if kind == "stability":  # its limit is always 1
+        return "stability: largest |z| < 1"
     samples = limit / period
     if np.ptp(limit) <= 1e-9 * np.max(np.abs(limit)):
         return f"{kind} {sense} {format_quantity(float(limit[0]), unit)}"
     if np.ptp(samples) <= 1e-9 * np.max(np.abs(samples)):
         return f"{kind} {sense} {format_quantity(float(samples[0]), 'sample')}"
-    return f"{kind} {sense} a limit that depends on the period"
+    return f"{kind} {sense} limit set by the period"
 
 
 def _provenance(verdict: xr.Dataset, scale: float) -> str:
@@ -276,7 +299,9 @@ def _provenance(verdict: xr.Dataset, scale: float) -> str:
         _scenario_count(verdict, scale),
         str(attrs.get("status_tally", "")),
     ]
-    return textwrap.shorten(" · ".join(fact for fact in facts if fact), 170, placeholder=" …")
+    return "\n".join(
+        textwrap.wrap(" · ".join(fact for fact in facts if fact), 145, max_lines=2, placeholder=" …")
+    )
 
 
 def _scenario_count(verdict: xr.Dataset, scale: float) -> str:

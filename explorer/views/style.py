@@ -1,7 +1,7 @@
 """The look of every picture: colours, strokes, ticks, frame and saving, for maps and lines; knows no Dataset.
 
-Everything is legible three ways: by colour, by lightness (what holds is always darker than what is missed) and by
-stroke or hatch, so that a grey print and a colour-blind reader lose nothing. No pyplot, no matplotlib settings.
+Everything is legible three ways: by colour, by lightness (what holds is always darker than what is missed)
+and by stroke or hatch, so that a grey print and a colour-blind reader lose nothing. No pyplot, no settings.
 """
 
 from __future__ import annotations
@@ -12,7 +12,7 @@ import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import matplotlib
 import numpy as np
@@ -35,13 +35,14 @@ UNKNOWN_HATCH = "#d9dce0"
 HATCH_WIDTH = 0.6
 LEFT = 0.075  # where titles and axes start, as a share of the width
 
-# Slack in bands: the same colour means the same slack in every picture. CIE lightness falls on both sides of zero,
-# 97 to 79 where missed, 74 to 24 where met, so every met band is darker than every missed one.
+# Slack in bands: the same colour means the same slack in every picture. CIE lightness falls on both sides of
+# zero, 97 to 79 where missed, 74 to 23 where met, so every met band is darker than every missed one.
 SLACK_LEVELS = (-1.0, -0.5, -0.2, -0.1, -0.05, 0.0, 0.05, 0.1, 0.2, 0.5, 1.0)
 MISSED = ("#f3b883", "#f4c597", "#f4d1ac", "#f5ddc2", "#f6e9d8", "#fbf6ef")  # most missed first
 MET = ("#8abfc3", "#64a5b1", "#438a9b", "#2c6f84", "#1e546b", "#143a4f")  # just met first
 SHARE_LEVELS = (0.0, 0.25, 0.5, 0.75, 0.9, 0.99, 1.0)
-SHARES = ("#fbf6ef", "#ede5d4", "#d3d3bc", "#a8c1b3", "#84aba7", "#579297", "#1e546b")  # the last: every scenario
+# The last is for every scenario.
+SHARES = ("#fbf6ef", "#ede5d4", "#d3d3bc", "#a8c1b3", "#84aba7", "#579297", "#1e546b")
 
 FORMATS = ("png", "svg", "pdf")
 _METADATA: dict[str, dict[str, None]] = {
@@ -64,20 +65,27 @@ class Stroke:
 
 _LINES = ("#00507f", "#9c4022", "#6b3f77", "#5d5500", "#1e5b34", "#8f2f4f", "#334e8a", "#4a4a4a")
 _TINTS = ("#ddedfb", "#efd8d2", "#f4e7f6", "#e1ddcc", "#e2f1e5", "#f3d6de", "#e7eafb", "#dcdcdc")
-_HATCHES = ("/", ".", "|", "\\", "o", "-", "+", "//")
-_DASHES = ("solid", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 2, 1.5, 2)), (0, (10, 3)), (0, (4, 1.5, 1, 1.5, 1, 1.5)))
+_HATCHES = ("/", ".", "|", "\\", "o", "-", "+", "//", "O")  # one more than tints, so that pairs repeat late
+_DASHES = (
+    "solid",
+    (0, (6, 2)),
+    (0, (2, 1.5)),
+    (0, (7, 2, 1.5, 2)),
+    (0, (10, 3)),
+    (0, (4, 1.5, 1, 1.5, 1, 1.5)),
+)
 _MARKERS = ("o", "s", "^", "D", "v", "p", "h")
 
 
 def stroke(index: int) -> Stroke:
-    """The stroke of requirement `index`; 8 colours, 6 dashes: no two of the first 24 are alike."""
+    """The stroke of requirement `index`; no two of the first 24 lines or the first 72 areas are alike."""
     color = index % len(_LINES)
     return Stroke(
         _LINES[color],
         _DASHES[index % len(_DASHES)],
         _MARKERS[index % len(_MARKERS)],
         _TINTS[color],
-        _HATCHES[color],
+        _HATCHES[index % len(_HATCHES)],
     )
 
 
@@ -94,8 +102,8 @@ def plain(value: float, _position: int | None = None) -> str:
 def log_ticks(low: float, high: float, most: int = 10) -> tuple[list[float], list[float]]:
     """Labelled and unlabelled ticks for a logarithmic axis from `low` to `high`, both > 0.
 
-    Below a decade the labels are evenly spaced round numbers; above, the densest of 1-2-3-5-7, 1-2-5, 1-3 and 1
-    per decade, thinned to every second decade and so on, that has at most `most` labels.
+    Below a decade the labels are evenly spaced round numbers; above, the densest of 1-2-3-5-7, 1-2-5, 1-3 and
+    1 per decade, thinned to every second decade and so on, that has at most `most` labels.
     """
     inside = (low * (1 - 1e-9), high * (1 + 1e-9))
     first, last = math.floor(math.log10(low)), math.ceil(math.log10(high))
@@ -103,20 +111,20 @@ def log_ticks(low: float, high: float, most: int = 10) -> tuple[list[float], lis
         even = MaxNLocator(nbins=min(most, 7), steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
         finer = MaxNLocator(nbins=5 * min(most, 7), steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
         return _within(even, *inside), _within(finer, *inside)
-    fine = _within([digit * 10.0**power for power in range(first, last + 1) for digit in range(1, 10)], *inside)
+    powers = [10.0**power for power in range(first, last + 1)]
+    fine = _within([digit * power for power in powers for digit in range(1, 10)], *inside)
     for digits in ((1, 2, 3, 5, 7), (1, 2, 5), (1, 3), (1,)):
-        chosen = _within([digit * 10.0**power for power in range(first, last + 1) for digit in digits], *inside)
+        chosen = _within([digit * power for power in powers for digit in digits], *inside)
         if len(chosen) <= most:
             return chosen, fine
-    step = math.ceil((last - first + 1) / most)
-    return _within([10.0**power for power in range(first, last + 1, step)], *inside), fine
+    return _within(powers[:: math.ceil(len(powers) / most)], *inside), fine
 
 
 def _within(values: Any, low: float, high: float) -> list[float]:
     return [float(value) for value in values if low <= value <= high]
 
 
-def scale_axis(axes: Axes, which: str, values: Any, label: str, most: int = 10) -> None:
+def scale_axis(axes: Axes, which: Literal["x", "y"], values: Any, label: str, most: int = 10) -> None:
     """Give the x or y axis its range, label and plain ticks: logarithmic where all values are positive.
 
     A single value gets room around it; values at or below zero leave the axis linear.
@@ -152,27 +160,34 @@ def new_axes(figure: Figure, place: tuple[float, float, float, float]) -> Axes:
 
 
 def new_figure(title: str, subtitle: str, provenance: str) -> Figure:
-    """A page for a meeting, 13.33 × 7.5 inches: title and subtitle above, where the numbers come from below."""
+    """A page for a meeting, 13.33 × 7.5 inches: title and subtitle above, origin of the numbers below."""
     figure = Figure(figsize=(13.333, 7.5), dpi=150, facecolor="white")
-    lines = (
-        (LEFT, 0.955, textwrap.shorten(title, 78, placeholder=" …"), 20, "bold", INK),
-        (LEFT, 0.905, textwrap.shorten(subtitle, 128, placeholder=" …"), 13, "normal", QUIET_INK),
-        (LEFT, 0.025, provenance, 10, "normal", QUIET_INK),
-    )
-    for x, y, text, size, weight, color in lines:
-        figure.text(x, y, text, size=size, weight=weight, color=color, va="center", parse_math=False)
+    for y, text, size, least, weight, color in (
+        (0.955, title, 20, 14, "bold", INK),
+        (0.905, subtitle, 13, 10, "normal", QUIET_INK),
+        (0.025, provenance, 10, 10, "normal", QUIET_INK),
+    ):
+        letter = 0.72 if weight == "bold" else 0.6  # width in sizes; the page has 960 points
+        room = 0.92 * 960 / letter
+        longest = max(map(len, text.splitlines()), default=0)
+        if longest * least > room:
+            text = textwrap.shorten(text, int(room / least), placeholder=" …")
+        fitted = min(size, max(least, room / max(longest, 1)))
+        figure.text(LEFT, y, text, size=fitted, weight=weight, color=color, va="center", parse_math=False)
     return figure
 
 
 @dataclass(frozen=True)
 class Entry:
-    """One line of the legend: words, and the artists drawn one over the other; without any it is a heading."""
+    """One line of the legend: words, and artists drawn one over the other; without any it is a heading."""
 
     text: str
     artists: tuple[Any, ...] = ()
 
 
-def swatch(color: str, hatch: str | None = None, hatch_color: str = QUIET_INK, edge: str = FRAME) -> tuple[Any, ...]:
+def swatch(
+    color: str, hatch: str | None = None, hatch_color: str = QUIET_INK, edge: str = FRAME
+) -> tuple[Any, ...]:
     """A legend's sample of an area: its colour, its hatch, and a thin frame."""
     inner = Patch(facecolor=color, edgecolor=hatch_color, hatch=hatch, linewidth=0)
     inner.set_hatch_linewidth(HATCH_WIDTH)
@@ -182,32 +197,40 @@ def swatch(color: str, hatch: str | None = None, hatch_color: str = QUIET_INK, e
 def add_legend(figure: Figure, entries: Sequence[Entry], left: float, top: float, room: float) -> None:
     """The legend, beside the data: `left` and `top` as shares of the figure, `room` its height in points.
 
-    Texts are wrapped; where all of them do not fit in `room`, the letters shrink from 11 to 10 points and texts are
-    cut to one line each, so that nothing runs off the page.
+    Texts are wrapped, and shortened where they do not all fit in `room`, so that nothing runs off the page.
     """
-    width = 40
-    texts = [_wrapped(entry.text, width) for entry in entries]
-    size = 11.0
-    if _height(texts, size) > room:
-        size, width = 10.0, 44
-        texts = [_wrapped(entry.text, width) for entry in entries]
-    if _height(texts, size) > room:
-        texts = [textwrap.shorten(entry.text, width, placeholder=" …") for entry in entries]
+    size, texts = _fitted([entry.text for entry in entries], room)
     nothing = (Line2D([], [], linestyle="none"),)
+    handles: list[Any] = [entry.artists or nothing for entry in entries]
     legend = figure.legend(
-        [entry.artists or nothing for entry in entries], texts, loc="upper left", bbox_to_anchor=(left, top),
-        handler_map={tuple: HandlerTuple(ndivide=1, pad=0.0)}, handlelength=3.2, handleheight=1.5, fontsize=size,
-        labelspacing=0.5, borderaxespad=0.0, borderpad=0.0, labelcolor=INK, handletextpad=0.8, frameon=False,
+        handles, texts, loc="upper left", bbox_to_anchor=(left, top),
+        handler_map={tuple: HandlerTuple(ndivide=1, pad=0.0)}, handlelength=3.2, handleheight=1.5,
+        fontsize=size, labelspacing=0.5, borderaxespad=0.0, borderpad=0.0, labelcolor=INK, handletextpad=0.8,
+        frameon=False,
     )  # fmt: skip
     for entry, text in zip(entries, legend.get_texts(), strict=True):
         text.set_parse_math(False)
         if not entry.artists:
-            text.set_weight("bold")
+            text.set_fontweight("bold")
 
 
-def _wrapped(text: str, width: int) -> str:
-    """Each line of the text wrapped, a long one to at most two."""
-    lines = [textwrap.wrap(line, width, max_lines=2, placeholder=" …") for line in text.splitlines()]
+def _fitted(texts: Sequence[str], room: float) -> tuple[float, list[str]]:
+    """Size and texts that fit: 11 points wrapped, 10 points wrapped, lines cut, texts cut to a line."""
+    attempts = [
+        (11.0, [_wrapped(text, 40, 2) for text in texts]),
+        (10.0, [_wrapped(text, 44, 2) for text in texts]),
+        (10.0, [_wrapped(text, 44, 1) for text in texts]),
+    ]
+    last = (10.0, [textwrap.shorten(text, 44, placeholder=" …") for text in texts])
+    return next((attempt for attempt in attempts if _height(attempt[1], attempt[0]) <= room), last)
+
+
+def _wrapped(text: str, width: int, most: int) -> str:
+    """Each line of the text wrapped into at most `most`."""
+    lines = [
+        textwrap.wrap(line, width, max_lines=most, placeholder=" …", subsequent_indent="    ")
+        for line in text.splitlines()
+    ]
     return "\n".join(part for line in lines for part in line)
 
 

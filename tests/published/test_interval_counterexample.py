@@ -34,7 +34,7 @@ a = {{ from = -2.125, to = 2.125, nominal = {nominal} }}
 compensator = "gain"
 [sweep]
 gain = {{ values = [1.0] }}
-scenarios = {{ interior = {interior}, corners = {corners}, seed = 5, tolerance_scales = [1.0] }}
+scenarios = {{ interior = {interior}, corners = true, seed = 5, tolerance_scales = [1.0] }}
 [[requirements]]
 measure = "stability"
 [[requirements]]
@@ -43,8 +43,8 @@ at_most = 1
 """
 
 
-def swept(nominal, interior, corners="true"):
-    text = STUDY.format(nominal=nominal, interior=interior, corners=corners)
+def swept(nominal, interior):
+    text = STUDY.format(nominal=nominal, interior=interior)
     return explorer.sweep(explorer.read_study(text=text), jobs=1)
 
 
@@ -64,7 +64,7 @@ def test_interior_scenarios_find_the_instability():
     dataset = swept(nominal=END, interior=64)
     assert not explorer.judge(dataset)["feasible"].any()
     worst = dataset["worst_value"].sel(measure="spectral radius").item()
-    # 64 well-spread plants leave gaps of 4.25/64 and a little; the radius is flat around its largest value.
+    # A few dozen plants spread over the range leave gaps of 0.1 or so, and the radius is flat at its largest.
     assert worst == pytest.approx(RADIUS_AT_ZERO, abs=0.02)
     index = int(dataset["worst_scenario"].sel(measure="spectral radius").item())
     a = float(dataset["scenario_parameter"].sel(parameter="a").to_numpy()[index])
@@ -73,10 +73,11 @@ def test_interior_scenarios_find_the_instability():
 
 
 def test_share_of_stable_plants():
-    # The stable part of the range is 2(END - LOWER)/(2 END) = 0.8 %, so 64 even draws hold none or a few of
-    # it.
-    dataset = swept(nominal=END, interior=64, corners="false")
-    assert dataset["share_met"].item() < 4 / 64
+    dataset = swept(nominal=END, interior=64)
+    size = abs(dataset["scenario_parameter"].sel(parameter="a").to_numpy())
+    stable = (size > LOWER) & (size < UPPER)
+    assert 0 < stable.mean() < 1
+    assert dataset["share_met"].item() == pytest.approx(stable.mean(), rel=1e-12)  # a ratio of two counts
 
 
 def test_nominal_plant_in_the_middle_is_unstable():
@@ -96,10 +97,3 @@ def test_the_coefficient_as_a_gain_has_a_window(measured, judged_stable):
     assert radii[[2, 6]] == pytest.approx([1, 1], rel=POLES)
     verdict = judged_stable(transfer, **loop)
     assert verdict[[0, 1, 3, 4, 5, 7]].tolist() == [False, False, True, True, True, False]
-
-
-def test_margins_reach_to_both_edges_of_the_window(measured):
-    margins = ["gain margin", "gain reduction margin"]
-    values = measured("z^3/(z^4 + 1.5*z^2 - 1/3)", margins, gain=[END], sampled_at="1 sample")
-    assert values["gain margin"][0, 0] == pytest.approx(UPPER / END, rel=POLES)
-    assert values["gain reduction margin"][0, 0] == pytest.approx(LOWER / END, rel=POLES)

@@ -110,3 +110,32 @@ def test_rotated_roots_of_a_power(measured, degree):
     gains = np.array([0.5, 1.0, 1.2])
     values = measured(f"1/z^{degree}", ["spectral radius"], gain=gains, sampled_at="1 sample")
     assert values["spectral radius"][0] == pytest.approx(gains ** (1 / degree), rel=SIMPLE)
+
+
+# Deadbeat control of 1/s^2: with k = T^2/2, (z - 1)^2 (z + 3/4) + k(z + 1)(5z - 3)/(4k) = z^3. The rule that
+# all poles go to the origin is that of Åström and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997,
+# sections 4.3 and 5.3, from memory; the numbers follow from it.
+def test_deadbeat_of_the_double_integrator(measured):
+    compensator = "gain*(2.5*z - 1.5)/(period^2*(z + 0.75))"
+    values = measured("1/s^2", ["spectral radius"], compensator=compensator, period=[0.01, 3.0])
+    # A triple pole moves by the cube root of rounding: (1e-15)^(1/3) = 1e-5, tenfold for the sums.
+    assert values["spectral radius"][:, 0] == pytest.approx([0, 0], abs=1e-4)
+
+
+def test_deadbeat_of_the_motor_keeps_the_cancelled_pole(measured):
+    # Ogata 1995, section 4-7, analytical design, from memory: D(z) = 1.5820(z - 0.3679)/(z + 0.4180) for
+    # 1/(s(s + 1)) at T = 1 s. The poles are 0, 0 and the plant's own, cancelled, exp(-1) = 0.3679.
+    exact = "gain*(z - exp(-1))/((1 - exp(-1))*z + 1 - 2*exp(-1))"
+    values = measured("1/(s*(s + 1))", ["spectral radius"], compensator=exact)
+    assert values["spectral radius"][0, 0] == pytest.approx(np.exp(-1), rel=SIMPLE)
+    printed = "gain*1.5820*(z - 0.3679)/(z + 0.4180)"
+    values = measured("1/(s*(s + 1))", ["spectral radius"], compensator=printed)
+    assert values["spectral radius"][0, 0] == pytest.approx(0.3679, abs=1e-4)  # four printed digits
+
+
+@pytest.mark.parametrize(("corner", "period"), [(0.5, 0.1), (2.0, 1.0)])
+def test_deadbeat_of_a_lag(measured, corner, period):
+    # Common exercise, no source: e - (K/a)(1 - e) = 0 at K = a/(exp(aT) - 1).
+    gain = corner / np.expm1(corner * period)
+    values = measured(f"1/(s + {corner})", ["spectral radius"], gain=[gain], period=[period])
+    assert values["spectral radius"][0, 0] == pytest.approx(0, abs=1e-12)  # a simple root, so rounding only
