@@ -36,6 +36,7 @@ SWEEP = {
     "measure_kind": Stored((MEASURE,), "", "name of the measure in the catalogue, with its basis"),
     "measure_unit": Stored((MEASURE,), "", "unit of the measure's values"),
     "parameter_unit": Stored((PARAMETER,), "", "SI unit of the parameter, empty when none was stated"),
+    "parameter_shown_unit": Stored((PARAMETER,), "", "unit in which people are shown the parameter"),
 }  # fmt: skip
 
 VERDICT = {

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from explorer.errors import Fault
+from explorer.study.display import shown_unit
 from explorer.study.expressions import ExpressionError, Node, closest, names_in, read_expression
 from explorer.study.locate import Path, line_of
 from explorer.study.quantities import Dimension, Quantity, QuantityError, read_in_unit, read_quantity
@@ -95,9 +96,9 @@ def of_kind(quantity: Quantity, dimension: Dimension) -> bool:
     return not quantity.stated or quantity.dimension == dimension
 
 
-def unit_of(quantity: Quantity) -> str:
-    """The SI unit text of a quantity: "" when none was stated."""
-    return str(quantity.dimension) if quantity.stated else ""
+def units_of(quantity: Quantity) -> tuple[str, str]:
+    """The SI unit text of a quantity and the one to show; "" twice when none was stated."""
+    return (str(quantity.dimension) if quantity.stated else "", shown_unit(quantity))
 
 
 def known_keys(table: Mapping[str, Any]) -> list[str]:

@@ -113,8 +113,8 @@ def _computing_delay(collector: Collector, section: LoopSection, time_unit: str,
         share = None
     if share is not None:
         if share < 0 or (in_z and share != round(share)):
-            collector.fault(path, f"found {shown(section.computing_delay)}",
-                            "allowed: whole periods with a plant given in z" if in_z else "allowed: 0 or more")  # fmt: skip
+            allowed = "allowed: whole periods with a plant given in z" if in_z else "allowed: 0 or more"
+            collector.fault(path, f"found {shown(section.computing_delay)}", allowed)
             return None
         return Delay(periods=share)
     time = collector.time(section.computing_delay, path, time_unit)

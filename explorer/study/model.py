@@ -43,13 +43,17 @@ class Measure:
 
 @dataclass(frozen=True)
 class Parameter:
-    """A plant parameter: exact (low = high = nominal), a range, or discrete variants (nominal first)."""
+    """A plant parameter: exact (low = high = nominal), a range, or discrete variants (nominal first).
+
+    unit : SI, "" when none was stated; shown : the unit to show people, see study.display.
+    """
 
     name: str
     nominal: float
     low: float
     high: float
     unit: str
+    shown: str = ""
     variants: tuple[float, ...] = ()
 
     @property
@@ -66,11 +70,12 @@ class Parameter:
 
 @dataclass(frozen=True)
 class Axis:
-    """One swept variable: name, values (ascending, SI) and the unit to show; spacing "log", "linear" or "values"."""
+    """One swept variable: values ascending, in SI; unit, and the one to show; spacing "log", "linear" or "values"."""
 
     name: str
     values: NDArray[np.float64]
     unit: str
+    shown: str
     spacing: str
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from typing import Any
 
-from explorer.study.collect import SECOND, Collector, unit_of
+from explorer.study.collect import SECOND, Collector, units_of
 from explorer.study.dimensions import Measured
 from explorer.study.expressions import FUNCTIONS, Name, Node, Number, closest, depends_on
 from explorer.study.locate import Path
@@ -100,7 +100,7 @@ def _nominal(
         if half < 0:
             collector.fault((*path, "tolerance"), f"found {shown(section.tolerance)}", "allowed: 0 or more")
             return None
-    parameter = Parameter(name, nominal.value, nominal.value - half, nominal.value + half, unit_of(nominal))
+    parameter = Parameter(name, nominal.value, nominal.value - half, nominal.value + half, *units_of(nominal))
     return parameter, Measured(nominal.dimension, not nominal.stated, nominal.stated)
 
 
@@ -144,7 +144,7 @@ def _range(
             f"allowed: between {shown(section.from_)} and {shown(section.to)}",
         )  # fmt: skip
         return None
-    return Parameter(name, nominal, low, high, unit_of(known[0])), Measured(
+    return Parameter(name, nominal, low, high, *units_of(known[0])), Measured(
         known[0].dimension, not known[0].stated, known[0].stated
     )
 
@@ -167,7 +167,7 @@ def _variants(
         )  # fmt: skip
         return None
     ordered = (nominal, *(number for number in numbers if number != nominal))
-    parameter = Parameter(name, nominal, nominal, nominal, unit_of(known[0]), ordered)
+    parameter = Parameter(name, nominal, nominal, nominal, *units_of(known[0]), ordered)
     return parameter, Measured(known[0].dimension, not known[0].stated, known[0].stated)
 
 

@@ -120,7 +120,7 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     axes, variables = read_axes(collector, sweep_table, list(parameters), in_z)
     scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
     if in_z and sampled_at:
-        axes["period"] = Axis("period", np.array([sampled_at[0]]), time_unit, "values")
+        axes["period"] = Axis("period", np.array([sampled_at[0]]), time_unit, time_unit, "values")
     variables["period"] = Measured(SECOND, stated=True)
     loop = _loop(collector, data, loop_table, [*dimensions, *variables], list(dimensions), time_unit, in_z)
     wanted = data.get("requirements")

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from explorer.study.collect import Collector
+from explorer.study.collect import Collector, units_of
 from explorer.study.dimensions import Measured
 from explorer.study.locate import Path
 from explorer.study.model import Axis, ScenarioPlan
@@ -143,10 +143,9 @@ def _checked(
     if len(set(numbers)) < len(numbers):
         collector.fault(path, "found one value twice", "allowed: different values")
         return None
-    unit = "s" if name == "period" else str(first.dimension) if first.stated else ""
-    return Axis(name, _spaced(numbers, points, spacing), unit, spacing), Measured(
-        first.dimension, not first.stated, first.stated
-    )
+    units = ("s", "s") if name == "period" else units_of(first)
+    axis = Axis(name, _spaced(numbers, points, spacing), *units, spacing)
+    return axis, Measured(first.dimension, not first.stated, first.stated)
 
 
 def _spaced(numbers: list[float], points: int | None, spacing: str) -> np.ndarray[Any, np.dtype[np.float64]]:

@@ -12,8 +12,8 @@ from numpy.typing import NDArray
 import explorer
 from explorer.kernels.roots import SOLVED, STATUS_MEANING
 from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE, SCENARIO, SWEEP, dims_of
+from explorer.study.display import format_shown
 from explorer.study.model import Axis, Study
-from explorer.study.quantities import format_quantity
 from explorer.study.requirement_part import unit_in
 from explorer.sweeping.scenarios import Scenarios
 from explorer.sweeping.tiles import Tile, TileResult
@@ -82,6 +82,7 @@ class Grid:
             SCENARIO: np.arange(len(scenarios.scale)),
             PARAMETER: _text(list(scenarios.names)),
             "parameter_unit": (PARAMETER, _text(list(scenarios.units)), _attributes("parameter_unit")),
+            "parameter_shown_unit": (PARAMETER, _text(list(scenarios.shown)), _attributes("parameter_shown_unit")),
         }  # fmt: skip
 
     def _provenance(self) -> dict[str, Any]:
@@ -104,15 +105,17 @@ class Grid:
         for code, meaning in STATUS_MEANING.items():
             if code != SOLVED and self.tally[code]:
                 gain, period = self.first[code]
-                where = f"gain = {format_quantity(gain, self.study.gain.unit)}"
-                when = f"period = {format_quantity(period, self.study.period.unit)}"
+                where = f"gain = {format_shown(gain, self.study.gain.shown)}"
+                when = f"period = {format_shown(period, self.study.period.shown)}"
                 count = f"{self.tally[code]} of {self.tally.sum()}"
                 parts.append(f"unsolved {count} ({meaning}), first at {where}, {when}")
         return "; ".join(parts)
 
 
 def _axis(axis: Axis, label: str) -> tuple[str, NDArray[np.float64], dict[str, str]]:
-    return axis.name, axis.values, {"units": axis.unit, "long_name": label, "spacing": axis.spacing}
+    return axis.name, axis.values, {
+        "units": axis.unit, "shown_unit": axis.shown, "long_name": label, "spacing": axis.spacing
+    }  # fmt: skip
 
 
 def _attributes(name: str) -> dict[str, str]:

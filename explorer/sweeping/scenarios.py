@@ -28,6 +28,7 @@ class Scenarios:
 
     names: tuple[str, ...]
     units: tuple[str, ...]
+    shown: tuple[str, ...]
     values: Real
     scale: Real
     note: str
@@ -62,17 +63,15 @@ def scenarios_of(study: Study) -> Scenarios:
         points = np.repeat(nominal[None], len(unit), axis=0)
         for column, index in enumerate(moving):
             low, high = parameters[index].reach(scale)
-            centre = parameters[index].nominal
-            away = unit[:, column]
-            points[:, index] = np.where(
-                away < 0, centre + away * (centre - low), centre + away * (high - centre)
-            )
+            share = 0.5 * (1.0 + unit[:, column])
+            points[:, index] = np.where(share == 1.0, high, low + share * (high - low))
         crossed = _crossed(points, variants, parameters)
         rows.append(crossed)
         scales.append(np.full(len(crossed), scale))
     return Scenarios(
         tuple(parameter.name for parameter in parameters),
         tuple(parameter.unit for parameter in parameters),
+        tuple(parameter.shown for parameter in parameters),
         np.concatenate(rows),
         np.concatenate(scales),
         note,

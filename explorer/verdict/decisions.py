@@ -13,7 +13,7 @@ import xarray
 from numpy.typing import NDArray
 
 from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE
-from explorer.study.quantities import format_quantity
+from explorer.study.display import format_shown
 from explorer.verdict.region import gain_windows, slowest_period
 
 Real = NDArray[np.float64]
@@ -53,16 +53,25 @@ def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
         },
         "unknown_points": int(np.isnan(toleranced.least).sum()),
         "points": int(toleranced.least.size),
-        "units": {"period": sweep[PERIOD].attrs["units"], "gain": sweep[GAIN].attrs["units"]}
-        | {name: sweep[name].attrs["units"] for name in toleranced.design},
-        "measure_units": dict(zip(_words(sweep[MEASURE]), _words(sweep["measure_unit"]), strict=True)),
-        "parameter_units": dict(zip(_words(sweep[PARAMETER]), _words(sweep["parameter_unit"]), strict=True)),
+        "swept_periods": len(toleranced.period),
         "limits": verdict.attrs["limits"],
-    } | {
-        name: verdict.attrs[name]
-        for name in ("study_sha256", "explorer_version", "seed", "created", "status_tally")
     }
+    provenance = ("study_sha256", "explorer_version", "seed", "created", "status_tally")
+    decision |= _units(sweep, toleranced.design) | {name: verdict.attrs[name] for name in provenance}
     return decision | {"answer": answer_in_words(decision)}
+
+
+def _units(sweep: xarray.Dataset, design: list[str]) -> Decision:
+    """SI units of everything in the decision, and the units in which its sentences speak."""
+    axes = (PERIOD, GAIN, *design)
+    parameters = _words(sweep[PARAMETER])
+    shown = dict(zip(parameters, _words(sweep["parameter_shown_unit"]), strict=True))
+    return {
+        "units": {name: sweep[name].attrs["units"] for name in axes},
+        "measure_units": dict(zip(_words(sweep[MEASURE]), _words(sweep["measure_unit"]), strict=True)),
+        "parameter_units": dict(zip(parameters, _words(sweep["parameter_unit"]), strict=True)),
+        "shown_units": shown | {name: sweep[name].attrs["shown_unit"] for name in axes},
+    }
 
 
 class _Planes:
@@ -157,10 +166,7 @@ def answer_in_words(decision: Decision) -> str:
     if nominal is None:
         sentences.append("Even the nominal plant alone holds everything nowhere.")
     else:
-        reach = "to the end of the axis, " if nominal["at_axis_end"] else ""
-        sentences.append(
-            f"The nominal plant alone would allow {reach}{_period(decision, nominal['period'])}."
-        )
+        sentences.append(_nominal(decision, nominal))
     if decision["unknown_points"]:
         sentences.append(
             f"{decision['unknown_points']} of {decision['points']} points are unknown and count as not feasible."
@@ -171,21 +177,35 @@ def answer_in_words(decision: Decision) -> str:
 def _held(decision: Decision) -> list[str]:
     slowest, best = decision["slowest_period"], decision["recommended"]
     low, high = (_gain(decision, gain) for gain in slowest["gain_window"])
-    end = ", the end of the axis" if slowest["at_axis_end"] else ""
-    sentences = [
-        f"With the tolerances as stated every requirement holds up to a sample period of "
-        f"{_period(decision, slowest['period'])}{end}, at a gain of {_gain(decision, slowest['gain'])}"
-        f"{_design(decision, slowest)}.",
-        f"At {_period(decision, slowest['grid_period'])} the gain may lie between {low} and {high}.",
-    ]
+    if decision["swept_periods"] == 1:
+        sentences = [
+            f"With the tolerances as stated every requirement holds at the period of "
+            f"{_period(decision, slowest['period'])} for gains from {low} to {high}{_design(decision, slowest)}."
+        ]
+    else:
+        end = ", the end of the axis" if slowest["at_axis_end"] else ""
+        sentences = [
+            f"With the tolerances as stated every requirement holds up to a sample period of "
+            f"{_period(decision, slowest['period'])}{end}, at a gain of {_gain(decision, slowest['gain'])}"
+            f"{_design(decision, slowest)}.",
+            f"At {_period(decision, slowest['grid_period'])} the gain may lie between {low} and {high}.",
+        ]
     if slowest["stopped_by"]:
         sentences.append(f"Slower is stopped by “{slowest['stopped_by']}”{_plant(decision, slowest)}.")
-    sentences.append(
+    return [
+        *sentences,
         f"Recommended: period {_period(decision, best['period'])}, gain {_gain(decision, best['gain'])}"
         f"{_design(decision, best)}, least slack {100 * best['least_slack']:.3g} %, "
-        f"bound by “{best['binding']}”{_plant(decision, best)}."
-    )
-    return sentences
+        f"bound by “{best['binding']}”{_plant(decision, best)}.",
+    ]
+
+
+def _nominal(decision: Decision, slowest: Decision) -> str:
+    low, high = (_gain(decision, gain) for gain in slowest["gain_window"])
+    if decision["swept_periods"] == 1:
+        return f"The nominal plant alone would allow gains from {low} to {high}{_design(decision, slowest)}."
+    end = ", the end of the axis" if slowest["at_axis_end"] else ""
+    return f"The nominal plant alone would allow {_period(decision, slowest['period'])}{end}."
 
 
 def _nowhere(decision: Decision) -> list[str]:
@@ -206,16 +226,16 @@ def _nowhere(decision: Decision) -> list[str]:
 
 
 def _period(decision: Decision, value: float) -> str:
-    return format_quantity(value, decision["units"]["period"])
+    return format_shown(value, decision["shown_units"]["period"])
 
 
 def _gain(decision: Decision, value: float) -> str:
-    return format_quantity(value, decision["units"]["gain"])
+    return format_shown(value, decision["shown_units"]["gain"])
 
 
 def _design(decision: Decision, place: Decision) -> str:
     parts = [
-        f"{name} = {format_quantity(value, decision['units'][name])}"
+        f"{name} = {format_shown(value, decision['shown_units'][name])}"
         for name, value in place["design"].items()
     ]
     return f" with {', '.join(parts)}" if parts else ""
@@ -225,8 +245,8 @@ def _plant(decision: Decision, place: Decision) -> str:
     """The scenario behind a binding requirement, in parentheses."""
     if not place["scenario"]:
         return ""
-    units = decision["parameter_units"]
-    parts = [f"{name} = {format_quantity(value, units[name])}" for name, value in place["scenario"].items()]
+    units = decision["shown_units"]
+    parts = [f"{name} = {format_shown(value, units[name])}" for name, value in place["scenario"].items()]
     return f" (worst plant: {', '.join(parts)})"
 
 

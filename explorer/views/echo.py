@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from explorer.kernels.roots import polynomial_roots
 from explorer.loop.plant import rational_in
 from explorer.loop.sampling import realise
+from explorer.study.display import format_shown
 from explorer.study.expressions import ExpressionError
 from explorer.study.model import Axis, Requirement, Study
 from explorer.study.quantities import format_quantity
@@ -149,12 +150,12 @@ def _complex(value: list[float], unit: str) -> str:
 
 def _parameter(study: Study, name: str) -> str:
     one = next(parameter for parameter in study.parameters if parameter.name == name)
-    nominal = f"{name} = {format_quantity(one.nominal, one.unit)}"
+    nominal = f"{name} = {format_shown(one.nominal, one.shown)}"
     if one.variants:
-        return f"{nominal}, or {', '.join(format_quantity(value, one.unit) for value in one.variants[1:])}"
+        return f"{nominal}, or {', '.join(format_shown(value, one.shown) for value in one.variants[1:])}"
     if one.varies:
         return (
-            f"{nominal}, from {format_quantity(one.low, one.unit)} to {format_quantity(one.high, one.unit)}"
+            f"{nominal}, from {format_shown(one.low, one.shown)} to {format_shown(one.high, one.shown)}"
         )
     return f"{nominal}, exact"
 
@@ -174,7 +175,7 @@ def _loop(study: Study) -> list[str]:
 
 
 def _axis(axis: Axis) -> str:
-    first, last = (format_quantity(value, axis.unit) for value in (axis.values[0], axis.values[-1]))
+    first, last = (format_shown(value, axis.shown) for value in (axis.values[0], axis.values[-1]))
     if len(axis.values) == 1:
         return f"{axis.name} = {first}"
     return f"{axis.name}: {first} to {last}, {len(axis.values)} points, {axis.spacing}"

@@ -147,7 +147,7 @@ def say_empty(clearing: Clearing, plane: Plane) -> None:
     elif plane.unknown.any():
         words = "No point is known to meet every requirement."
     else:
-        words = "Nowhere do all requirements hold at once."
+        words = f"Nowhere{' in this slice' if plane.design else ''} do all requirements hold at once."
     box = {"boxstyle": "round,pad=0.5", "facecolor": "white", "edgecolor": style.INK}
     half = clearing.half_size(words, 16, bold=True) * (1.0, 1.4)
     look = {"size": 16, "weight": "bold", "color": style.INK, "bbox": box}

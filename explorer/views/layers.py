@@ -1,7 +1,7 @@
 """What a map is made of, layer by layer: axes and a plane in, artists and entries of a legend for maps out.
 
 Slack is bounded to ±2 before any line is traced, so that an infinite neighbour moves an edge by less than a
-cell. The region is traced from the least slack between grid points, which is never more than the edges enclose.
+cell. The region is traced from the least slack at the grid points, so it never exceeds what edges enclose.
 What touches an unknown point is left open, and the ground under everything is the mark of the unknown.
 """
 
@@ -82,6 +82,7 @@ def region(axes: Axes, plane: Plane) -> tuple[list[style.Entry], Any | None]:
     if inner:
         look: dict[str, Any] = {"colors": "white", "linewidths": 1.0, "corner_mask": False, "zorder": 4}
         contours = axes.contour(x, y, field, inner, **look)
+        contours.set_gid("equal slack")
         sample = Line2D([], [], color="white", linewidth=1.2)
         entries.append(style.Entry("line of equal least slack", (*style.swatch(style.MET[2]), sample)))
     zero_line(axes, plane, plane.least, colors=style.INK, linewidths=1.2, zorder=5)
@@ -154,15 +155,15 @@ def signed_field(axes: Axes, plane: Plane, field: Floats) -> None:
     _bands(axes, plane, _bounded(field), [-_BOUND, *style.SLACK_LEVELS, _BOUND], [*style.MISSED, *style.MET])
 
 
-def share_field(axes: Axes, plane: Plane, share: Floats) -> None:
-    """Shares 0..1 in bands; where all scenarios meet everything the darkest, with a bold line around it."""
+def share_field(axes: Axes, plane: Plane, share: Floats) -> Any | None:
+    """Shares 0..1 in bands, the darkest where all scenarios meet everything; returns the line around it."""
     levels = [-1e-9, *style.SHARE_LEVELS[1:-1], 1.0 + 1e-9]
     _bands(axes, plane, np.ma.masked_invalid(share), levels, style.SHARES[:-1])
     # A plateau at 1 has no slope to place its edge by. The least slack has, if judged by the same limits.
     whole = np.where(plane.unknown, np.nan, share - (1.0 - 1e-9))
     field = plane.least if np.array_equal(whole >= 0, plane.feasible) else whole
     _fill(axes, plane, field, facecolor=style.SHARES[-1], zorder=4, gid="all scenarios")
-    zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
+    return zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
 
 
 def draw_marks(axes: Axes, points: Mapping[str, Mark]) -> list[style.Entry]:
@@ -212,7 +213,7 @@ def _bounded(field: Floats) -> np.ma.MaskedArray[Any, Any]:
 
 def _bands(axes: Axes, plane: Plane, field: Any, levels: Sequence[float], colors: Sequence[str]) -> None:
     x, y = plane.period.values, plane.gain.values
-    axes.contourf(x, y, field, levels, colors=colors, corner_mask=False, zorder=3)
+    axes.contourf(x, y, field, levels, colors=colors, corner_mask=False, zorder=3).set_gid("bands")
 
 
 def _fill(

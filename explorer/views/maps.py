@@ -166,15 +166,16 @@ def _field_map(plane: Plane, points: Mapping[str, Mark], index: int | None) -> F
     figure, axes = _new_map(plane, heading)
     held = layers.known_ground(axes, plane)
     layers.signed_field(axes, plane, field)
-    layers.zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
+    edge = layers.zero_line(axes, plane, field, colors=style.INK, linewidths=2.6)
+    outline = None
     entries = [style.Entry("slack 0: the edge", (Line2D([], [], color=style.INK, linewidth=2.6),))]
     if index is not None and plane.feasible.any():
-        layers.zero_line(axes, plane, plane.least, colors="white", linewidths=1.6)
-        outline = Line2D([], [], color="white", linewidth=1.6)
-        outline.set_path_effects(style.halo(style.QUIET_INK, 3.0))
-        entries.append(style.Entry("where all requirements hold", (outline,)))
+        outline = layers.zero_line(axes, plane, plane.least, colors="white", linewidths=1.6)
+        sample = Line2D([], [], color="white", linewidth=1.6)
+        sample.set_path_effects(style.halo(style.QUIET_INK, 3.0))
+        entries.append(style.Entry("where all requirements hold", (sample,)))
     entries += layers.draw_marks(axes, points) + held
-    labels.label_marks(_clearing(axes, plane, points), points)
+    labels.label_marks(_clearing(axes, plane, points, edge, outline), points)
     _slack_bar(figure, _BAR)
     style.add_legend(figure, entries, _LEGEND[0], _BAR[1] - 0.06, room=200)
     return figure
@@ -187,13 +188,12 @@ def _binding_map(plane: Plane, points: Mapping[str, Mark]) -> Figure:
     for index in sorted(layers.binding_areas(axes, plane)):
         text = f"{index + 1}  {plane.requirements[index].full}"
         entries.append(style.Entry(text, layers.area_sample(index)))
-    clearing = _clearing(axes, plane, points)
     outline = layers.zero_line(axes, plane, plane.least, colors="white", linewidths=5.0)
     if outline is not None:
         layers.zero_line(axes, plane, plane.least, colors=style.INK, linewidths=2.6)
         entries.append(style.Entry("edge of the region", (Line2D([], [], color=style.INK, linewidth=2.6),)))
-        clearing.take("outline", layers.vertices(outline))
     entries += layers.draw_marks(axes, points) + held
+    clearing = _clearing(axes, plane, points, outline)
     labels.label_marks(clearing, points)
     labels.name_region(clearing, plane)
     labels.name_areas(clearing, plane, np.ones_like(plane.feasible))
@@ -206,7 +206,7 @@ def _share_map(plane: Plane, share: Floats, points: Mapping[str, Mark]) -> Figur
         return lines.share_lines(plane, share)
     figure, axes = _new_map(plane, f"Share of scenarios that meet the study's own limits, within {plane.box}")
     held = layers.known_ground(axes, plane)
-    layers.share_field(axes, plane, share)
+    traced = layers.share_field(axes, plane, share)
     texts = [f"{low:.0%} to {high:.0%}" for low, high in pairwise(style.SHARE_LEVELS)] + ["all"]
     shades = [
         style.Entry(text.replace("%", " %"), style.swatch(color))
@@ -215,7 +215,7 @@ def _share_map(plane: Plane, share: Floats, points: Mapping[str, Mark]) -> Figur
     edge = style.Entry("edge: every scenario", (Line2D([], [], color=style.INK, linewidth=2.6),))
     entries = [style.Entry("Scenarios that meet everything"), *reversed(shades), edge]
     entries += layers.draw_marks(axes, points) + held
-    labels.label_marks(_clearing(axes, plane, points), points)
+    labels.label_marks(_clearing(axes, plane, points, traced), points)
     style.add_legend(figure, entries, *_LEGEND, room=410)
     return figure
 
@@ -227,9 +227,12 @@ def _new_map(plane: Plane, heading: str) -> tuple[Figure, Axes]:
     return figure, axes
 
 
-def _clearing(axes: Axes, plane: Plane, points: Mapping[str, Mark]) -> labels.Clearing:
-    """The free room beside what is unknown, the decision's points and the line of the slowest period."""
+def _clearing(axes: Axes, plane: Plane, points: Mapping[str, Mark], *traced: Any | None) -> labels.Clearing:
+    """The free room beside traced lines, the unknown, the decision's points and the slowest period's line."""
     clearing = labels.Clearing(axes)
+    for number, line in enumerate(traced):
+        if line is not None:
+            clearing.take(f"line {number}", layers.vertices(line))
     if plane.unknown.any():
         row, column = np.nonzero(plane.unknown)
         clearing.take("unknown", np.column_stack([plane.period.values[column], plane.gain.values[row]]))

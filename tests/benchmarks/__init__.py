@@ -1,0 +1,1 @@
+"""Benchmarks: the program beside what one would write without it; run `python -m tests.benchmarks`."""
