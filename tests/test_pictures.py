@@ -127,6 +127,26 @@ def test_limits_in_samples_and_foreign_text_are_written_as_they_are() -> None:
 
 
 @pytest.mark.parametrize(
+    ("gains", "unit", "label", "scale"),
+    [
+        (np.linspace(-5.0, 80.0, 9), "V/m", "gain [V/m]", "linear"),
+        (np.geomspace(1e-7, 8e-6, 9), "N*m*s/rad", "gain [10⁻⁶ N*m*s/rad]", "log"),
+        (np.geomspace(2e6, 3e7, 9), "1", "gain [10⁶]", "log"),
+        (np.geomspace(2.0, 3.0, 9), "", "gain", "log"),
+    ],
+)
+def test_axes_show_real_units(gains: Any, unit: str, label: str, scale: str) -> None:
+    verdict = run(periods=np.geomspace(2e-6, 30e-6, 8), gains=np.geomspace(10.0, 90.0, 9))[1]
+    figure = region_map(verdict.assign_coords(gain=("gain", gains, {"units": unit})))
+    axes = figure.axes[0]
+    assert axes.get_xlabel() == "sample period [µs]"
+    assert (axes.get_ylabel(), axes.get_yscale()) == (label, scale)
+    FigureCanvasAgg(figure).draw()
+    assert all("10^" not in tick.get_text() for tick in axes.get_yticklabels())
+    assert sum(tick.get_text() != "" for tick in axes.get_yticklabels()) >= 3
+
+
+@pytest.mark.parametrize(
     ("low", "high", "expected"),
     [
         (0.5, 40.0, ["0.5", "1", "2", "5", "10", "20"]),

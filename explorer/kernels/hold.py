@@ -188,51 +188,99 @@ def sample_with_hold(
     """
     scenarios, n = start.shape
     augmented = np.zeros((n + 1, n + 1), np.complex128)
-    full, part, rest = np.empty_like(augmented), np.empty_like(augmented), np.empty_like(augmented)
-    spare, running = np.empty_like(augmented), np.empty((n, n + 1), np.complex128)
-    product, roots = np.empty(n + 1, np.complex128), np.empty(n, np.complex128)
+    full = np.empty_like(augmented)
     early, late = np.empty(n, np.complex128), np.empty(n, np.complex128)
-    below, above = np.empty(n + 1, np.complex128), np.empty(n + 2)
     for scenario in range(scenarios):
         augmented[1:, 0] = start[scenario]
         augmented[1:, 1:] = state[scenario]
         for column in range(period.shape[1]):
-            time, delay = period[scenario, column], dead_time[scenario, column]
-            samples = delay / time
-            count = round(samples)
-            if abs(samples - count) > _WHOLE * max(1.0, samples):
-                count = math.ceil(samples)
-                advance = min(count * time - delay, time)
-            else:
-                advance = 0.0
-            whole[scenario, column] = int(count)
-            exponential_of_triangle(augmented, time, full, spare)
-            late[:] = 0.0
-            if advance > 0.0:
-                exponential_of_triangle(augmented, advance, part, spare)
-                exponential_of_triangle(augmented, time - advance, rest, spare)
-                late[:] = part[1:, 0]
-                for i in range(n):
-                    early[i] = 0.0
-                    for j in range(i + 1):
-                        early[i] += part[i + 1, j + 1] * rest[j + 1, 0]
-            else:
-                early[:] = full[1:, 0]
+            time = period[scenario, column]
+            count, advance = _whole_samples(dead_time[scenario, column], time)
+            whole[scenario, column] = count
+            _held_input(augmented, time, advance, full, early, late)
             for variable in range(2):
-                for i in range(n):
-                    exponent = state[scenario, i, i] * time
-                    roots[i] = _exponential_minus_one(exponent) if variable == 0 else _exponential(exponent)
-                below[:] = 0.0
-                below[0] = 1.0
-                for i in range(n):
-                    _times_root(below, roots[i], n + 1)
-                above[:] = 0.0
-                step = full[1:, 1:]
-                slope = 1.0 if variable == 0 else 0.0  # z = 1 + w
-                _add_response(step, roots, early, output[scenario], 0, slope, above, running, product)
-                if advance > 0.0:
-                    _add_response(step, roots, late, output[scenario], 1, slope, above, running, product)
-                for power in range(n + 1):
-                    value = above[power] + direct[scenario] * below[power].real
-                    numerator[scenario, column, variable, n - power] = value
-                    denominator[scenario, column, variable, n - power] = below[power].real
+                _transfer(
+                    state[scenario],
+                    full,
+                    time,
+                    early,
+                    late,
+                    output[scenario],
+                    direct[scenario],
+                    variable,
+                    numerator[scenario, column, variable],
+                    denominator[scenario, column, variable],
+                )
+
+
+@_kernel
+def _whole_samples(delay: float, time: float) -> tuple[int, float]:
+    """delay = count * time - advance with 0 <= advance < time."""
+    samples = delay / time
+    count = round(samples)
+    if abs(samples - count) <= _WHOLE * max(1.0, samples):
+        return int(count), 0.0
+    count = math.ceil(samples)
+    return int(count), min(count * time - delay, time)
+
+
+@_kernel
+def _held_input(
+    augmented: NDArray[Any],
+    time: float,
+    advance: float,
+    full: NDArray[Any],
+    early: NDArray[Any],
+    late: NDArray[Any],
+) -> None:
+    """exp(augmented * time), and what one held sample adds to the state before (early) and after its change (late).
+
+    augmented : [[0, 0], [start, state]]; the first column of its exponential is the integral of exp(state t) start.
+    """
+    n = early.shape[0]
+    spare = np.empty_like(full)
+    exponential_of_triangle(augmented, time, full, spare)
+    if advance == 0.0:
+        early[:] = full[1:, 0]
+        late[:] = 0.0
+        return
+    part, rest = np.empty_like(full), np.empty_like(full)
+    exponential_of_triangle(augmented, advance, part, spare)
+    exponential_of_triangle(augmented, time - advance, rest, spare)
+    late[:] = part[1:, 0]
+    for i in range(n):
+        early[i] = 0.0
+        for j in range(i + 1):
+            early[i] += part[i + 1, j + 1] * rest[j + 1, 0]
+
+
+@_kernel
+def _transfer(
+    state: NDArray[Any],
+    full: NDArray[Any],
+    time: float,
+    early: NDArray[Any],
+    late: NDArray[Any],
+    output: NDArray[Any],
+    direct: float,
+    variable: int,
+    numerator: NDArray[Any],
+    denominator: NDArray[Any],
+) -> None:
+    """Numerator and denominator, (n+1,) descending, in w (variable 0) or z (variable 1)."""
+    n = early.shape[0]
+    roots, below = np.empty(n, np.complex128), np.zeros(n + 1, np.complex128)
+    running, product = np.empty((n, n + 1), np.complex128), np.empty(n + 1, np.complex128)
+    above = np.zeros(n + 2)
+    below[0] = 1.0
+    for i in range(n):
+        exponent = state[i, i] * time
+        roots[i] = _exponential_minus_one(exponent) if variable == 0 else _exponential(exponent)
+        _times_root(below, roots[i], n + 1)
+    slope = 1.0 if variable == 0 else 0.0  # z = 1 + w
+    step = full[1:, 1:]
+    _add_response(step, roots, early, output, 0, slope, above, running, product)
+    _add_response(step, roots, late, output, 1, slope, above, running, product)
+    for power in range(n + 1):
+        numerator[n - power] = above[power] + direct * below[power].real
+        denominator[n - power] = below[power].real

@@ -176,7 +176,7 @@ def answer_in_words(decision: Decision) -> str:
 
 def _held(decision: Decision) -> list[str]:
     slowest, best = decision["slowest_period"], decision["recommended"]
-    low, high = (_gain(decision, gain) for gain in slowest["gain_window"])
+    low, high = _window(decision, slowest)
     if decision["swept_periods"] == 1:
         sentences = [
             f"With the tolerances as stated every requirement holds at the period of "
@@ -186,7 +186,7 @@ def _held(decision: Decision) -> list[str]:
         end = ", the end of the axis" if slowest["at_axis_end"] else ""
         sentences = [
             f"With the tolerances as stated every requirement holds up to a sample period of "
-            f"{_period(decision, slowest['period'])}{end}, at a gain of {_gain(decision, slowest['gain'])}"
+            f"{_period(decision, _within(slowest['period']))}{end}, at a gain of {_gain(decision, slowest['gain'])}"
             f"{_design(decision, slowest)}.",
             f"At {_period(decision, slowest['grid_period'])} the gain may lie between {low} and {high}.",
         ]
@@ -201,11 +201,11 @@ def _held(decision: Decision) -> list[str]:
 
 
 def _nominal(decision: Decision, slowest: Decision) -> str:
-    low, high = (_gain(decision, gain) for gain in slowest["gain_window"])
+    low, high = _window(decision, slowest)
     if decision["swept_periods"] == 1:
         return f"The nominal plant alone would allow gains from {low} to {high}{_design(decision, slowest)}."
     end = ", the end of the axis" if slowest["at_axis_end"] else ""
-    return f"The nominal plant alone would allow {_period(decision, slowest['period'])}{end}."
+    return f"The nominal plant alone would allow {_period(decision, _within(slowest['period']))}{end}."
 
 
 def _nowhere(decision: Decision) -> list[str]:
@@ -223,6 +223,19 @@ def _nowhere(decision: Decision) -> list[str]:
         f"The nearest is period {_period(decision, nearest['period'])}, gain {_gain(decision, nearest['gain'])}"
         f"{_design(decision, nearest)}: “{nearest['binding']}” is missed{missing}{_plant(decision, nearest)}.",
     ]
+
+
+def _window(decision: Decision, slowest: Decision) -> tuple[str, str]:
+    low, high = slowest["gain_window"]
+    return _gain(decision, _within(low, up=True)), _gain(decision, _within(high))
+
+
+def _within(value: float, up: bool = False) -> float:
+    """Rounded to four digits towards the inside of the region, so that no sentence promises more than there is."""
+    if value == 0 or not np.isfinite(value):
+        return value
+    step = 10.0 ** (np.floor(np.log10(abs(value))) - 3)
+    return float((np.ceil if up else np.floor)(value / step * (1 - 1e-12 if up else 1 + 1e-12)) * step)
 
 
 def _period(decision: Decision, value: float) -> str:

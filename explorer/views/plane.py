@@ -13,6 +13,7 @@ import numpy.typing as npt
 import xarray as xr
 
 from explorer.errors import OptionError
+from explorer.study.display import factor_of, format_shown
 from explorer.study.quantities import format_quantity
 
 Floats = npt.NDArray[np.float64]
@@ -31,7 +32,7 @@ class Axis:
 
     def words(self, shown: float) -> str:
         """A value on this axis for a sentence, from its shown number."""
-        return format_quantity(shown / self.factor, self.unit)
+        return format_shown(shown / self.factor, self.unit)
 
 
 @dataclass(frozen=True)
@@ -226,10 +227,10 @@ def _design(
 
 def _named(name: str, value: float, recommended: float | None, unit: str) -> str:
     """A design variable's value in this slice, and the recommended one where that is another."""
-    text = f"{name} = {format_quantity(value, unit)}"
+    text = f"{name} = {format_shown(value, unit)}"
     if recommended is None or math.isclose(recommended, value, rel_tol=1e-9):
         return text
-    return f"{text} (recommended: {format_quantity(recommended, unit)})"
+    return f"{text} (recommended: {format_shown(recommended, unit)})"
 
 
 def _on_axis(verdict: xr.Dataset, name: str, value: float) -> float:
@@ -238,18 +239,21 @@ def _on_axis(verdict: xr.Dataset, name: str, value: float) -> float:
     there = np.flatnonzero(np.isclose(values, float(value), rtol=1e-9, atol=1e-15))
     if not there.size:
         unit = _unit(verdict[name])
-        swept = ", ".join(format_quantity(float(one), unit) for one in values)
-        raise OptionError(f"{name} {format_quantity(float(value), unit)} was not swept; there are: {swept}")
+        swept = ", ".join(format_shown(float(one), unit) for one in values)
+        raise OptionError(f"{name} {format_shown(float(value), unit)} was not swept; there are: {swept}")
     return float(values[there[0]])
 
 
 def _unit(values: xr.DataArray) -> str:
-    return str(values.attrs.get("units", ""))
+    """The unit to show: as written in the study where it is kept, else the stored one."""
+    return str(values.attrs.get("shown_unit", values.attrs.get("units", "")))
 
 
 def _axis(name: str, values: xr.DataArray) -> Axis:
-    """Seconds are shown in the unit that suits the axis; others stay, with a power of ten if they must."""
-    numbers, unit = np.asarray(values, dtype=float), _unit(values)
+    """Seconds in the multiple that suits the axis, others in their writer's unit, by a power of ten if they must."""
+    unit = _unit(values)
+    own = 1.0 / factor_of(unit)
+    numbers = np.asarray(values, dtype=float) * own
     middle = math.sqrt(float(numbers.min()) * float(numbers.max())) if numbers.min() > 0 else 1.0
     thousands = math.floor(math.log10(middle / 0.3) / 3)
     if unit == "s":
@@ -259,10 +263,10 @@ def _axis(name: str, values: xr.DataArray) -> Axis:
         )
     shown = "samples" if unit == "sample" else unit
     if -1 <= thousands <= 1:  # 0.0003 to 300000 in the middle: plain numbers can be read
-        return Axis(numbers, 1.0, f"{name} [{shown}]" if shown else name, unit)
+        return Axis(numbers, own, f"{name} [{shown}]" if shown else name, unit)
     power = "10" + str(3 * thousands).translate(str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹"))
     label = f"{name} [{power} {shown}]" if shown not in ("", "1") else f"{name} [{power}]"
-    return Axis(numbers * 1000.0**-thousands, 1000.0**-thousands, label, unit)
+    return Axis(numbers * 1000.0**-thousands, own * 1000.0**-thousands, label, unit)
 
 
 def _requirements(cut: xr.Dataset) -> tuple[Requirement, ...]:
@@ -306,10 +310,7 @@ def _provenance(verdict: xr.Dataset, scale: float) -> str:
 
 def _scenario_count(verdict: xr.Dataset, scale: float) -> str:
     """How many scenarios stand behind this scale; "" when the verdict does not carry them."""
-    if "scenario_scale" in verdict:
-        count = int((verdict["scenario_scale"] <= scale * (1 + 1e-12)).sum())
-    elif "scenario" in verdict.sizes:
-        count = verdict.sizes["scenario"]
-    else:
+    if "scenario_scale" not in verdict:
         return ""
+    count = int((verdict["scenario_scale"] <= scale * (1 + 1e-12)).sum())
     return f"{count} scenario" if count == 1 else f"{count} scenarios"

@@ -1,1 +1,1 @@
-"""Benchmarks: the program beside what one would write without it; run `python -m tests.benchmarks`."""
+"""Benchmarks: the program beside what one would write without it; see `python -m tests.benchmarks`."""

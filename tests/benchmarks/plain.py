@@ -30,10 +30,10 @@ def worst_values(cases: Cases) -> Real:
 
 
 def pulse_transfer(speed_gain: float, lag: float, dead_time: float, period: float) -> tuple[Real, Real]:
-    """Numerator and denominator in z, descending, of the plant behind a hold and a fraction of a period's delay.
+    """Numerator and denominator in z, descending, of the plant behind hold and dead time < period, both [s].
 
-    The input of the sample before still acts for `dead_time`, the new one for the rest of the period; the former
-    is a third state. Source: Åström and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, §2.3.
+    The input of the sample before still acts for `dead_time`, the new one for the rest of the period; the
+    former is a third state. Source: Åström and Wittenmark, Computer-Controlled Systems, 3rd ed. 1997, §2.3.
     """
     plant = (
         np.array([[0.0, 1.0], [0.0, -1.0 / lag]]),
@@ -50,7 +50,7 @@ def pulse_transfer(speed_gain: float, lag: float, dead_time: float, period: floa
     return numerator[0], denominator
 
 
-def measures(poles: NDArray[np.complexfloating], period: float) -> tuple[float, float, float]:
+def measures(poles: NDArray[np.inexact], period: float) -> tuple[float, float, float]:
     """Damping ratio [1], settling time [s] (+inf when unstable) and largest |z| of one loop."""
     exponent = np.log(poles.astype(complex))
     damping = (-exponent.real / np.abs(exponent)).min()

@@ -1,7 +1,7 @@
-"""Study: the question every way of computing answers, as text for the program and as Cases for plain and vectorised.
+"""Study: the question all ways answer, as text for the program and as Cases for plain and vectorised.
 
-The loop is of degree 4 everywhere: two states of the plant, one sample of delay because the total dead time is a
-fraction of every period, one pole of the compensator. The data are invented.
+The loop is of degree 4 everywhere: two states of the plant, one sample of delay because the total dead time
+is a fraction of every period, one pole of the compensator. The data are invented.
 """
 
 from __future__ import annotations
@@ -40,7 +40,7 @@ compensator     = "gain * (1 + lead*(z - 1)/(period*(z - {FILTER_POLE})))"
 computing_delay = "{COMPUTING_DELAY} s"
 
 [sweep]
-gain   = {{ from = "2 V/m", to = "200 V/m", points = GAINS, spacing = "log" }}
+gain   = {{ from = "2 V/m", to = "400 V/m", points = GAINS, spacing = "log" }}
 period = {{ from = "2 ms", to = "40 ms", points = PERIODS, spacing = "log" }}
 lead   = {{ values = ["{LEAD} s"] }}
 scenarios = {{ interior = INTERIOR, corners = true, seed = 7, tolerance_scales = [0, 0.5, 1.0, 1.5] }}

@@ -1,6 +1,7 @@
 """Vectorised: Cases from study in, worst values out, with whole arrays of loops handed to NumPy and SciPy.
 
-Closed-loop state matrices of all scenarios and gains of one period at a time: more at once only leaves the cache.
+Closed-loop state matrices of all scenarios and gains of one period at a time: that bounds the memory, and
+more at once is no faster.
 """
 
 from __future__ import annotations
