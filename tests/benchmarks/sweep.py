@@ -121,10 +121,10 @@ def _as_table(
     headings = ("way", "loops timed", "best [s]", "loops/s", "whole grid [s]", "x plain", "x vectorised")
     notes = (
         f"Best of {ROUNDS}, the ways taking turns, after a warm-up that is not counted; one BLAS thread.",
-        f"Plain and vectorised are timed at {PLAIN_PERIODS} and {VECTORISED_PERIODS} random periods, all gains and "
-        "plants; their times for",
+        f"Plain and vectorised are timed at {PLAIN_PERIODS} and {VECTORISED_PERIODS} random periods, "
+        "all gains and plants; their times for",
         "the whole grid are extrapolated. Every way samples a plant once per period, not once per gain.",
-        f"Worst values of all ways agree, checked before any time is printed: largest relative difference "
+        "Worst values of all ways agree, checked before any time is printed: largest relative difference "
         f"{difference:.0e},",
         f"allowed {AGREEMENT:.0e}.",
     )
