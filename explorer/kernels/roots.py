@@ -11,6 +11,8 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from explorer.kernels.factors import FLOOR, NONE
+
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
@@ -68,6 +70,24 @@ def poles(polynomial_w: Real, polynomial_z: Real) -> Poles:
         status[good[~sound]] = UNCERTIFIED
         log_z[good[sound]] = answer[sound]
     return Poles(log_z.reshape(*shape, degree), status.reshape(shape))
+
+
+def reductions_of(log_z: Complex) -> Real:
+    """What measures need of solved poles, as kernels.factors.reduced gives it: (5, ...) from (..., n), NaN for NaN."""
+    size, turn = np.maximum(log_z.real, FLOOR), np.abs(log_z.imag)
+    slowest = size.max(axis=-1, initial=FLOOR)
+    absolute = np.hypot(size, turn)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        damping = np.where(absolute == 0, 0.0, -size / absolute).min(axis=-1, initial=1.0)
+    paired = (turn != 0) & (turn != np.pi) & (size > FLOOR)
+    own = np.where(paired, size, NONE)
+    place = own.argmax(axis=-1)[..., None] if log_z.shape[-1] else None
+    unknown = np.isnan(slowest)
+    pair = np.full(slowest.shape, NONE) if place is None else np.take_along_axis(own, place, -1)[..., 0]
+    angle = np.zeros(slowest.shape) if place is None else np.take_along_axis(turn, place, -1)[..., 0]
+    angle = np.where(pair == NONE, 0.0, angle)
+    least = absolute.min(axis=-1, initial=-FLOOR)
+    return np.stack([slowest, damping, least, np.where(unknown, np.nan, pair), np.where(unknown, np.nan, angle)])
 
 
 def polynomial_roots(polynomial: Real) -> Complex:
@@ -152,7 +172,7 @@ def certified(polynomial: Real, roots: Complex) -> NDArray[np.bool_]:
         absolute[..., 1:] = absolute[..., 1:] + np.abs(root) * absolute[..., :-1]
     residual = np.abs(polynomial / polynomial[..., :1] - product)
     bound = (4 + degree) * _UNITS * np.finfo(float).eps * absolute
-    return np.asarray((residual <= bound).all(axis=-1))
+    return np.asarray(((residual <= bound) & np.isfinite(bound)).all(axis=-1))
 
 
 def _polished(polynomial: Real, roots: Complex, rounds: int = 8) -> Complex:

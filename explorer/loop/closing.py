@@ -1,4 +1,4 @@
-"""Closing the loop: a sampled plant and a compensator in, characteristic polynomials for kernels.roots out.
+"""Closing the loop: a sampled plant and a compensator in, characteristic polynomials for solving out.
 
 The coefficients are formed here and nowhere else: a(w)·(1 + w)^d·c(w) + b(w)·e(w) for the plant b/(a z^d) and
 the compensator e/c, as a function of gain, period and parameters.
@@ -13,7 +13,6 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from explorer.kernels.roots import HIGHEST_DEGREE, TOO_LONG, Poles, poles
 from explorer.loop.compensator import Compensator
 
 Real = NDArray[np.float64]
@@ -33,50 +32,41 @@ class Sampled(NamedTuple):
 
 
 class Group(NamedTuple):
-    """The poles of those (scenario, period) pairs that share one whole-sample delay, so one degree.
+    """Those (scenario, period) pairs that share one whole-sample delay, so one degree.
 
-    rows, columns : (M,) indices of scenario and period; found : Poles with log_z (M, G, degree).
+    rows, columns : (M,) scenario and period of each pair, the periods one after the other.
     """
 
+    delay: int
     rows: NDArray[np.intp]
     columns: NDArray[np.intp]
-    found: Poles
 
 
-def closed_loop_poles(sampled: Sampled, compensator: Compensator, gain: Real) -> Iterator[Group]:
-    """All closed-loop poles at every (scenario, period, gain), one group per whole-sample delay."""
+def groups_of(sampled: Sampled) -> Iterator[Group]:
+    """The pairs of a sampled plant by delay."""
     for delay in np.unique(sampled.whole):
-        rows, columns = np.nonzero(sampled.whole == delay)
-        if sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay > HIGHEST_DEGREE:
-            shape = (len(rows), len(gain))
-            unknown = Poles(np.full((*shape, 1), np.nan + 0j), np.full(shape, TOO_LONG, np.int8))
-            yield Group(rows, columns, unknown)
-            continue
-        in_w, in_z = (
-            _at_gains(*characteristic(sampled, compensator, rows, columns, int(delay), variable), gain)
-            for variable in (0, 1)
-        )
-        yield Group(rows, columns, poles(in_w, in_z))
+        columns, rows = np.nonzero(delay == sampled.whole.T)
+        yield Group(int(delay), rows, columns)
+
+
+def degree_of(sampled: Sampled, compensator: Compensator, delay: int) -> int:
+    """Degree of the characteristic polynomial."""
+    return sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay
 
 
 def characteristic(
-    sampled: Sampled,
-    compensator: Compensator,
-    rows: NDArray[np.intp],
-    columns: NDArray[np.intp],
-    delay: int,
-    variable: int,
+    sampled: Sampled, compensator: Compensator, group: Group, variable: int
 ) -> tuple[Real, Real]:
-    """The polynomial constant + gain * slope of selected (scenario, period) pairs with `delay` whole samples.
+    """The polynomial constant + gain * slope of the pairs of a group; variable : 0 in w, 1 in z.
 
-    variable : 0 in w, 1 in z. Both results are (M, K, n+1), descending powers: K = 1 when the compensator is
-    affine in the gain; otherwise K = gains and the slope is zero.
+    Both results are (M, K, n+1), descending powers: K = 1 when the compensator is affine in the gain; otherwise
+    K = gains and the slope is zero.
     """
-    below = sampled.denominator[rows, columns, variable][:, None]
-    above = sampled.numerator[rows, columns, variable][:, None]
-    under = np.moveaxis(compensator.denominator[variable][:, columns], 0, 1)
-    over = np.moveaxis(compensator.numerator[variable][:, columns], 0, 1)
-    open_loop = _product(_product(below, power_of_z(delay, variable)), under)
+    below = sampled.denominator[group.rows, group.columns, variable][:, None]
+    above = sampled.numerator[group.rows, group.columns, variable][:, None]
+    under = np.moveaxis(compensator.denominator[variable][:, group.columns], 0, 1)
+    over = np.moveaxis(compensator.numerator[variable][:, group.columns], 0, 1)
+    open_loop = _product(_product(below, power_of_z(group.delay, variable)), under)
     if not compensator.affine:
         constant = _sum(open_loop, _product(above, over))
         return constant, np.zeros_like(constant)
@@ -88,11 +78,6 @@ def power_of_z(delay: int, variable: int) -> Real:
     if variable == 0:
         return np.array([math.comb(delay, k) for k in range(delay + 1)], float)
     return np.array([1.0] + [0.0] * delay)
-
-
-def _at_gains(constant: Real, slope: Real, gain: Real) -> Real:
-    """(M, G, n+1)."""
-    return constant + gain[None, :, None] * slope
 
 
 def _product(left: Real, right: Real) -> Real:

@@ -15,8 +15,9 @@ from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE, SCENARIO, SW
 from explorer.study.display import format_shown
 from explorer.study.model import Axis, Study
 from explorer.study.requirement_part import unit_in
+from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios
-from explorer.sweeping.tiles import Tile, TileResult
+from explorer.sweeping.tiles import Tile
 
 
 class Grid:

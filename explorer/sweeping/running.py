@@ -13,9 +13,10 @@ import explorer
 from explorer.errors import OptionError
 from explorer.study.model import Study
 from explorer.sweeping.dataset import Grid
+from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios, scenarios_of
 from explorer.sweeping.store import SWEEP_FILE, TileStore, owned, read_dataset, write_dataset
-from explorer.sweeping.tiles import Tile, TileResult, compute, tiles_of
+from explorer.sweeping.tiles import Tile, compute, tiles_of
 
 Progress = Callable[[int, int], None]  # tiles finished, tiles in all
 

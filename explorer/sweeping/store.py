@@ -21,7 +21,7 @@ import numpy as np
 import xarray
 
 from explorer.errors import RunError
-from explorer.sweeping.tiles import TileResult
+from explorer.sweeping.reduction import TileResult
 
 SWEEP_FILE, VERDICT_FILE, DECISION_FILE = "sweep.nc", "verdict.nc", "decision.json"
 

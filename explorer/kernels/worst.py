@@ -1,0 +1,59 @@
+"""Worst over scenarios: values of many loops in, the worst of each scale, period and gain kept, for sweeping."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numba
+from numpy.typing import NDArray
+
+Array = NDArray[Any]
+
+
+@numba.njit(cache=True, nogil=True, error_model="numpy")
+def keep_worst(
+    values: Array,
+    pairs: int,
+    scenario: Array,
+    column: Array,
+    scale: Array,
+    sign: float,
+    worst: Array,
+    place: Array,
+) -> None:
+    """Merge the values of one requirement.
+
+    Parameters
+    ----------
+    values : (blocks, G, LANES); pair k is lane k % LANES of block k // LANES. scenario, column, scale : (M,) of each
+        pair, scenarios ascending within a column.
+    sign : +1 when larger is worse, -1 when smaller is. worst : (scales, P, G) of sign * value, NaN unknown, in place;
+        place : (scales, P, G) int32, -1 where nothing was seen. The first NaN wins over every number; of equal values
+        the lowest scenario stays.
+    """
+    lanes = values.shape[2]
+    for pair in range(pairs):
+        block, lane = pair // lanes, pair % lanes
+        level, period, number = scale[pair], column[pair], scenario[pair]
+        for step in range(values.shape[1]):
+            value = sign * values[block, step, lane]
+            old, known = worst[level, period, step], place[level, period, step]
+            if known < 0:
+                worst[level, period, step], place[level, period, step] = value, number
+            elif math.isnan(old):
+                if math.isnan(value) and number < known:
+                    place[level, period, step] = number
+            elif math.isnan(value) or value > old or (value == old and number < known):
+                worst[level, period, step], place[level, period, step] = value, number
+
+
+@numba.njit(cache=True, nogil=True, error_model="numpy")
+def count_met(met: Array, pairs: int, column: Array, scale: Array, count: Array) -> None:
+    """Add to count (scales, P, G) the loops of `met` (blocks, G, LANES) bool."""
+    lanes = met.shape[2]
+    for pair in range(pairs):
+        block, lane = pair // lanes, pair % lanes
+        level, period = scale[pair], column[pair]
+        for step in range(met.shape[1]):
+            count[level, period, step] += met[block, step, lane]
