@@ -121,9 +121,10 @@ def gain_steps(gain: NDArray[np.float64]) -> NDArray[np.float64]:
     place = np.log(gain) if (gain > 0).all() else gain
     steps = np.zeros((len(gain), 5))
     steps[:, 0] = gain
-    for index in range(1, len(gain)):
-        known = place[max(0, index - 4) : index][::-1]
-        for k, own in enumerate(known):
-            others = np.delete(known, k)
-            steps[index, 1 + k] = np.prod((place[index] - others) / (own - others))
+    for known in range(1, 5):  # number of points to extrapolate from
+        rows = np.arange(known, len(gain)) if known == 4 else np.arange(known, min(known + 1, len(gain)))
+        past = place[rows[:, None] - 1 - np.arange(known)]
+        for own in range(known):
+            others = np.delete(past, own, axis=1)
+            steps[rows, 1 + own] = np.prod((place[rows, None] - others) / (past[:, own, None] - others), axis=1)
     return steps

@@ -39,16 +39,20 @@ def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real)
     """Reductions of all poles of a group's loops at every gain; steps : (G, 5) from kernels.tracking.gain_steps."""
     degree, pairs = degree_of(sampled, compensator, group.delay), len(group.rows)
     blocks, gain = -(-pairs // LANES), steps[:, 0]
-    reductions = np.full((blocks, len(gain), REDUCTIONS, LANES), np.nan)
+    reductions = np.empty((blocks, len(gain), REDUCTIONS, LANES))
     status = np.full((blocks, len(gain), LANES), SOLVED, np.int8)
     if degree > HIGHEST_DEGREE:
-        status[:] = TOO_LONG
+        status[:], reductions[:] = TOO_LONG, np.nan
         return Solved(reductions, status)
-    in_w, in_z = (characteristic(sampled, compensator, group, variable) for variable in (0, 1))
-    certificates = np.zeros((blocks, len(gain), LANES))
+    in_w = characteristic(sampled, compensator, group, variable=0)
+    certificates = np.zeros((blocks, len(gain), LANES))  # none yet
     if 0 < degree <= HIGHEST_TRACKED:
         constant, slope = (_in_lanes(part, blocks) for part in in_w)
         tracker(degree)(constant, slope, steps, reductions, certificates)
+    if (certificates == 1.0).all():
+        return Solved(reductions, status)
+    in_z = characteristic(sampled, compensator, group, variable=1)
+    if 0 < degree <= HIGHEST_TRACKED:
         _track_in_z(degree, in_z, steps, reductions, certificates)
     _solve_rest(in_w, in_z, gain, reductions, status, certificates)
     return Solved(reductions, status)

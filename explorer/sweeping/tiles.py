@@ -26,7 +26,7 @@ from explorer.sweeping.scenarios import Scenarios
 Real = NDArray[np.float64]
 
 LOOPS_IN_TILE = 2_000_000  # a fraction of a second of work, and what a killed run can lose
-LOOPS_AT_ONCE = 50_000  # bounds memory, and keeps what one step leaves for the next in the processor's cache
+LOOPS_AT_ONCE = 200_000  # bounds memory, and the work between two looks at it by the interpreter
 
 
 class Tile(NamedTuple):

@@ -16,7 +16,7 @@ import subprocess
 import sys
 from importlib import import_module
 
-SECTIONS = ("sweep",)  # each a module beside this one with a function table()
+SECTIONS = ("roots", "sweep")  # each a module beside this one with a function table()
 UNSET = ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE")
 ONE_THREAD = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 

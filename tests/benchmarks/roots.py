@@ -1,0 +1,127 @@
+"""Section "roots": the tracking kernel with its reduction against bare batched companion eigenvalues, by degree.
+
+256 scenarios of one plant family at 200 gains over three decades; eight families per degree, drawn at random: real
+and complex poles, sampled at periods from a hundredth to half of the time constants, and a compensator's zeros.
+"""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Mapping
+
+import numpy as np
+from numpy.typing import NDArray
+
+from explorer.kernels.lanes import LANES
+from explorer.kernels.tracking import REDUCTIONS, gain_steps, tracker
+
+from .table import Table, best_times
+
+Real = NDArray[np.float64]
+
+DEGREES, FAMILIES, SCENARIOS, ROUNDS = (2, 3, 4, 6, 8, 12), 8, 256, 3
+GAIN = np.geomspace(0.05, 50.0, 200)
+STEPS = gain_steps(GAIN)
+
+
+def table() -> Table:
+    """The section; raises RuntimeError if a certified spectral radius differs from LAPACK's."""
+    rows = [_row(degree) for degree in DEGREES]
+    return Table(
+        f"Root kernel: {FAMILIES} families of {SCENARIOS} scenarios x {len(GAIN)} gains per degree",
+        ("degree", "eigvals ns", "kernel ns", "ratio mean", "ratio least", "2 threads ns", "handed over"),
+        rows,
+        (
+            f"Nanoseconds per polynomial, best of {ROUNDS}, kernel and eigvals taking turns. The kernel's time holds",
+            "certificates and reduction to radius, damping, frequency and slowest pair; numpy.linalg.eigvals is bare.",
+            "Handed over: share of polynomials left to companion eigenvalues because they were not certified or not",
+            "resolved in w; the sweep tries these in z first.",
+        ),
+    )
+
+
+def family(degree: int, seed: int) -> tuple[Real, Real]:
+    """(SCENARIOS, degree+1) coefficients in w, constant and slope."""
+    generator = np.random.default_rng([degree, seed])
+    period = 10.0 ** generator.uniform(-2, -0.3)
+    poles = -(10.0 ** generator.uniform(-1, 1, degree)).astype(complex)
+    if degree > 1 and generator.random() < 0.5:
+        poles[:2] = -0.3 + 3j, -0.3 - 3j
+    zeros = -1 + 0.3 * generator.uniform(-1, 1, max(degree - 3, 0))
+    zeros = np.append(zeros, -period * generator.uniform(0.5, 2)) if degree > 2 else zeros
+    numerator = np.atleast_1d(np.poly(zeros))
+    constant, slope = np.empty((SCENARIOS, degree + 1)), np.zeros((SCENARIOS, degree + 1))
+    for row in range(SCENARIOS):
+        spread = 1 + 0.1 * generator.uniform(-1, 1, degree)
+        spread[1:2] = spread[:1]  # a pair stays one
+        moved = np.expm1(poles * spread * period)
+        constant[row] = np.poly(moved).real
+        slope[row, degree + 1 - len(numerator) :] = numerator * np.prod(np.abs(moved)) / abs(numerator[-1])
+    return constant, slope
+
+
+def tracked(degree: int, constant: Real, slope: Real) -> tuple[Real, Real]:
+    """Reductions and certificates of a family."""
+    blocks = len(constant) // LANES
+    lanes = [np.ascontiguousarray(part.reshape(blocks, LANES, -1).transpose(0, 2, 1)) for part in (constant, slope)]
+    reductions, marks = np.empty((blocks, len(GAIN), REDUCTIONS, LANES)), np.empty((blocks, len(GAIN), LANES))
+    tracker(degree)(*lanes, STEPS, reductions, marks)
+    return reductions, marks
+
+
+def eigenvalues(polynomial: Real) -> Real:
+    """Bare batched eigenvalues of companion matrices made beforehand."""
+    return np.linalg.eigvals(polynomial)
+
+
+def companions(constant: Real, slope: Real) -> Real:
+    """(SCENARIOS, G, n, n)."""
+    polynomial = constant[:, None] + GAIN[:, None] * slope[:, None]
+    degree = polynomial.shape[-1] - 1
+    matrix = np.zeros((*polynomial.shape[:2], degree, degree))
+    matrix[..., 0, :] = -polynomial[..., 1:] / polynomial[..., :1]
+    matrix[..., np.arange(1, degree), np.arange(degree - 1)] = 1.0
+    return matrix
+
+
+def _row(degree: int) -> tuple[str, ...]:
+    kernel, bare, double, handed = [], [], [], []
+    tracked(degree, *family(degree, 0))  # compiled, not counted
+    for seed in range(FAMILIES):
+        constant, slope = family(degree, seed)
+        matrix = companions(constant, slope)
+        ways = {
+            "kernel": lambda c=constant, s=slope: tracked(degree, c, s),
+            "bare": lambda m=matrix: eigenvalues(m),
+            "double": lambda c=constant, s=slope: _twice(degree, c, s),
+        }
+        best = best_times(ways, ROUNDS, _agreeing)
+        count = SCENARIOS * len(GAIN) / 1e9
+        kernel.append(best["kernel"] / count)
+        bare.append(best["bare"] / count)
+        double.append(best["double"] / count / 2)
+        handed.append(float((tracked(degree, constant, slope)[1] != 1.0).mean()))
+    ratio = np.array(bare) / np.array(kernel)
+    return (
+        str(degree), f"{np.mean(bare):.0f}", f"{np.mean(kernel):.1f}", f"{ratio.mean():.0f}", f"{ratio.min():.0f}",
+        f"{np.mean(double):.1f}", f"{np.mean(handed):.2%}",
+    )  # fmt: skip
+
+
+def _twice(degree: int, constant: Real, slope: Real) -> None:
+    """The same family in two threads at once."""
+    threads = [threading.Thread(target=tracked, args=(degree, constant, slope)) for _ in range(2)]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+
+
+def _agreeing(answers: Mapping[str, object]) -> None:
+    reductions, marks = answers["kernel"]  # type: ignore[misc]
+    roots = np.asarray(answers["bare"])
+    radius = np.abs(1 + roots).max(axis=-1).reshape(-1, LANES, len(GAIN)).transpose(0, 2, 1)
+    sure = marks == 1.0
+    difference = np.abs(np.exp(reductions[:, :, 0]) - radius)[sure] / radius[sure]
+    if difference.max() > 1e-6:  # nearly double roots move by the square root of rounding
+        raise RuntimeError(f"spectral radii differ by {difference.max():.1e}")
