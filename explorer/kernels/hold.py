@@ -23,6 +23,7 @@ import explorer.kernels  # the cache folder is chosen there
 assert explorer.kernels
 
 _WHOLE = 1e-12  # dead times this close to a whole number of samples are that number
+_MOST_SAMPLES = 1e9  # dead times beyond this are this: no loop is solved with anything like it
 _TERMS = 20  # Taylor terms for a norm of at most 1/2: the remainder is below 0.5**20/20! = 4e-25
 
 
@@ -216,7 +217,7 @@ def sample_with_hold(
 @_kernel
 def _whole_samples(delay: float, time: float) -> tuple[int, float]:
     """delay = count * time - advance with 0 <= advance < time."""
-    samples = delay / time
+    samples = min(delay / time, _MOST_SAMPLES)
     count = round(samples)
     if abs(samples - count) <= _WHOLE * max(1.0, samples):
         return int(count), 0.0

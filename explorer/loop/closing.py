@@ -59,6 +59,7 @@ def closed_loop_poles(sampled: Sampled, compensator: Compensator, gain: Real) ->
         yield Group(rows, columns, poles(in_w, in_z))
 
 
+@np.errstate(over="ignore", invalid="ignore")  # a plant beyond the numbers becomes a status of kernels.roots
 def characteristic(
     sampled: Sampled,
     compensator: Compensator,
@@ -90,6 +91,7 @@ def power_of_z(delay: int, variable: int) -> Real:
     return np.array([1.0] + [0.0] * delay)
 
 
+@np.errstate(over="ignore", invalid="ignore")
 def _at_gains(constant: Real, slope: Real, gain: Real) -> Real:
     """(M, G, n+1)."""
     return constant + gain[None, :, None] * slope

@@ -54,10 +54,11 @@ class TileResult:
 
 
 def tiles_of(study: Study, scenarios: int) -> list[Tile]:
-    """The cut of the grid."""
+    """The cut of the grid; a tile of one scenario holds no more loops than are solved at once."""
     designs = int(np.prod([len(axis.values) for axis in study.design], dtype=int))
     length = len(study.period.values)
-    step = int(np.clip(LOOPS_IN_TILE // (scenarios * len(study.gain.values)), 1, length))
+    gains = len(study.gain.values)
+    step = int(np.clip(min(LOOPS_IN_TILE // (scenarios * gains), LOOPS_AT_ONCE // gains), 1, length))
     cuts = [(design, start) for design in range(designs) for start in range(0, length, step)]
     return [
         Tile(number, design, start, min(start + step, length)) for number, (design, start) in enumerate(cuts)
@@ -92,7 +93,8 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile) -> TileResult:
             true_period = sampled.period[rows, columns][:, None]
             for index, requirement in enumerate(study.requirements):
                 measure = BY_POLES[requirement.measure.key]
-                values[index, rows, columns] = measure(found.log_z, true_period, requirement.band)
+                value = measure(found.log_z, true_period, requirement.band)
+                values[index, rows, columns] = np.where(found.status == SOLVED, value, np.nan)
         reduction.add(values, start)
     return reduction.result()
 
