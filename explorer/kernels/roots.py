@@ -29,6 +29,9 @@ HIGHEST_DEGREE = 96  # companion matrices beyond this are slow, and dead times t
 # Which coefficient-wise backward error certifies a root set: rounding alone leaves about (4 + n) units; LAPACK
 # is backward stable only in norm, so it is given a margin, still a thousandth of the accuracy promised.
 _UNITS = 2000.0
+_EXCUSED = 8.0  # units that rounding alone explains in the value of a polynomial at one root
+_ENTRIES = 4_000_000  # of all companion matrices at once: 32 MB, and a few times that beside them
+_REAL = 1e-12  # relative imaginary part that polishing leaves of a real root, far below what tells a pair apart
 _RESOLVED = 1e-11  # estimated relative error of s up to which a root in w needs no second opinion in z
 
 
@@ -58,17 +61,12 @@ def poles(polynomial_w: Real, polynomial_z: Real) -> Poles:
     status = _admitted(in_w, in_z)
     log_z = np.full((len(in_w), degree), np.nan, complex)
     good = np.flatnonzero(status == SOLVED)
-    if len(good) and degree > 0:
-        roots, sound = _certified_roots(in_w[good])
-        answer = logarithm_of_one_plus(roots)
-        estimate = error_of_logarithm(in_w[good], roots, 1 + roots, answer)
-        doubtful = np.flatnonzero((estimate > _RESOLVED).any(axis=1))
-        if len(doubtful):
-            answer[doubtful] = _better_of(
-                answer[doubtful], roots[doubtful], estimate[doubtful], in_z[good[doubtful]]
-            )
-        status[good[~sound]] = UNCERTIFIED
-        log_z[good[sound]] = answer[sound]
+    block = max(1, _ENTRIES // (degree + 1) ** 2)
+    for start in range(0, len(good) if degree else 0, block):
+        rows = good[start : start + block]
+        answer, sound = _solved(in_w[rows], in_z[rows])
+        status[rows[~sound]] = UNCERTIFIED
+        log_z[rows[sound]] = answer[sound]
     return Poles(log_z.reshape(*shape, degree), status.reshape(shape))
 
 
@@ -90,6 +88,18 @@ def reductions_of(log_z: Complex) -> Real:
     return np.stack([slowest, damping, least, np.where(unknown, np.nan, pair), np.where(unknown, np.nan, angle)])
 
 
+@np.errstate(all="ignore")  # what leaves the numbers fails its certificate
+def _solved(in_w: Real, in_z: Real) -> tuple[Complex, NDArray[np.bool_]]:
+    """log z of admitted polynomials (M, n+1), and whether each set has its certificate."""
+    roots, sound = _certified_roots(in_w)
+    answer = logarithm_of_one_plus(roots)
+    estimate = np.where(roots == 0, 0.0, error_of_logarithm(in_w, roots, 1 + roots, answer))  # z = 1 is exact
+    doubtful = np.flatnonzero((estimate > _RESOLVED).any(axis=1))
+    if len(doubtful):
+        answer[doubtful] = _better_of(answer[doubtful], roots[doubtful], estimate[doubtful], in_z[doubtful])
+    return answer, sound
+
+
 def polynomial_roots(polynomial: Real) -> Complex:
     """All roots of real polynomials, (..., n+1) descending in, (..., n) complex out, conjugates adjacent.
 
@@ -107,15 +117,26 @@ def polynomial_roots(polynomial: Real) -> Complex:
     matrix = np.zeros((*monic.shape[:-1], degree, degree))
     matrix[..., 0, :] = -monic[..., 1:]
     matrix[..., np.arange(1, degree), np.arange(degree - 1)] = 1.0
-    return np.linalg.eigvals(matrix).astype(complex)
+    return _eigenvalues(matrix)
+
+
+def _eigenvalues(matrix: Real) -> Complex:
+    """Eigenvalues of many matrices; NaN for those on which LAPACK gives up, which no other may suffer from."""
+    try:
+        return np.linalg.eigvals(matrix).astype(complex)
+    except np.linalg.LinAlgError:
+        if matrix.ndim == 2:
+            return np.full(len(matrix), np.nan, complex)
+        return np.stack([_eigenvalues(one) for one in matrix])
 
 
 def logarithm_of_one_plus(w: Complex) -> Complex:
     """log(1 + w), accurate for small |w| (numpy's complex log1p is not: it forms 1 + w first)."""
     x, y = w.real, w.imag
-    with np.errstate(divide="ignore", invalid="ignore"):
-        # |1 + w|² - 1 = x(2 + x) + y²: exact where w is small, and harmless where it is not
-        size = np.where(np.abs(1 + w) < 0.5, np.log(np.abs(1 + w)), 0.5 * np.log1p(x * (2 + x) + y * y))
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        # |1 + w|² - 1 = x(2 + x) + y²: exact where w is small, and used only near |1 + w| = 1
+        far = (np.abs(1 + w) < 0.5) | (np.abs(1 + w) > 2)
+        size = np.where(far, np.log(np.abs(1 + w)), 0.5 * np.log1p(x * (2 + x) + y * y))
     return size + 1j * np.arctan2(y, 1 + x)
 
 
@@ -125,7 +146,10 @@ def _admitted(in_w: Real, in_z: Real) -> NDArray[np.int8]:
         status[:] = TOO_LONG
         return status
     status[in_w[:, 0] == 0] = ILL_POSED
-    status[~(np.isfinite(in_w).all(axis=1) & np.isfinite(in_z).all(axis=1))] = NOT_FINITE
+    with np.errstate(all="ignore"):
+        finite = np.isfinite(in_w / in_w[:, :1]).all(axis=1) & np.isfinite(in_z / in_z[:, :1]).all(axis=1)
+    status[~finite & (status == SOLVED)] = NOT_FINITE
+    status[~np.isfinite(in_w).all(axis=1)] = NOT_FINITE
     return status
 
 
@@ -176,19 +200,25 @@ def certified(polynomial: Real, roots: Complex) -> NDArray[np.bool_]:
 
 
 def _polished(polynomial: Real, roots: Complex, rounds: int = 8) -> Complex:
-    """Simultaneous corrections of all roots (Aberth 1973, Math. Comp. 27, 339-344)."""
+    """Simultaneous corrections (Aberth 1973, Math. Comp. 27, 339-344) of the roots that rounding does not excuse.
+
+    One that solves its polynomial to rounding stays: a cluster such as the poles of a dead time would only scatter.
+    """
     with np.errstate(all="ignore"):
         for _ in range(rounds):
             value, slope = np.zeros_like(roots), np.zeros_like(roots)
+            size, absolute = np.zeros(roots.shape), np.abs(roots)
             for index in range(polynomial.shape[-1]):
                 slope = slope * roots + value
                 value = value * roots + polynomial[..., index : index + 1]
+                size = size * absolute + np.abs(polynomial[..., index : index + 1])
             newton = value / slope
             gaps = roots[..., :, None] - roots[..., None, :]
             repulsion = np.where(gaps == 0, 0, 1 / gaps).sum(axis=-1)
             step = newton / (1 - newton * repulsion)
-            roots = np.where(np.isfinite(step), roots - step, roots)
-    return roots
+            inexact = np.abs(value) > _EXCUSED * np.finfo(float).eps * size
+            roots = np.where(inexact & np.isfinite(step), roots - step, roots)
+        return np.where(np.abs(roots.imag) <= _REAL * np.abs(roots), roots.real, roots)
 
 
 def _quadratic(b: Real, c: Real) -> Complex:

@@ -54,6 +54,7 @@ def degree_of(sampled: Sampled, compensator: Compensator, delay: int) -> int:
     return sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay
 
 
+@np.errstate(over="ignore", invalid="ignore")  # a plant beyond the numbers becomes a status of kernels.roots
 def characteristic(
     sampled: Sampled, compensator: Compensator, group: Group, variable: int
 ) -> tuple[Real, Real]:

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from explorer.kernels.roots import polynomial_roots
+from explorer.study.expressions import ExpressionError
 from explorer.study.rational import NotAffineError, Rational, multiply
 
 Real = NDArray[np.float64]
@@ -63,6 +64,7 @@ def _matched(transfer: Rational, period: Real, in_w: bool) -> Rational:
     """Every root s_i at exp(s_i T), missing zeros at z = -1, equal to the original as s goes to 0.
 
     A root at s = 0 becomes (z - 1)/T. A missing pole (a transfer with more zeros than poles) goes to z = 0.
+    Raises ExpressionError where a factor loses its leading coefficient, and with it a root.
     """
     result, lacking = Rational(transfer.scale), 0
     for factor, power in transfer.factors:
@@ -82,6 +84,8 @@ def _matched(transfer: Rational, period: Real, in_w: bool) -> Rational:
 def _matched_factor(factor: Real, power: int, period: Real, in_w: bool) -> Rational:
     batch = np.broadcast_shapes(factor.shape[1:-1], period.shape)
     spread = np.broadcast_to(factor[0], (*batch, factor.shape[-1]))
+    if (spread[..., 0] == 0).any():
+        raise ExpressionError(1, "the order changes somewhere on the axes (a leading coefficient is 0);")
     roots = polynomial_roots(spread) * period[..., None]
     moved = np.expm1(roots)
     positions = moved if in_w else np.exp(roots)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -10,10 +10,11 @@ from explorer.errors import Fault
 from explorer.study.display import shown_unit
 from explorer.study.expressions import ExpressionError, Node, closest, names_in, read_expression
 from explorer.study.locate import Path, line_of
-from explorer.study.quantities import Dimension, Quantity, QuantityError, read_in_unit, read_quantity
+from explorer.study.quantities import Quantity, QuantityError, read_in_unit, read_quantity
 from explorer.study.schema import Section, shown, validated
 
 SECOND = read_quantity("1 s").dimension
+MOST_FAULTS = 40  # finding a line parses the study some times over
 
 
 @dataclass
@@ -24,12 +25,23 @@ class Collector:
     file: str
     faults: list[Fault] = field(default_factory=list)
     assumptions: list[str] = field(default_factory=list)
+    names_complete: bool = True  # False where a whole table of names is missing: unknown ones are a consequence
+
+    def has_fault(self, *paths: Path) -> bool:
+        """Whether a fault was found at one of the paths."""
+        keys = [_key(path) for path in paths]
+        return any(known.key in keys for known in self.faults)
 
     def fault(self, path: Path, found: str, allowed: str, mend: str = "") -> None:
-        """Add one fault at a key path; a second fault at the same place is usually a consequence and is dropped."""
+        """Add one fault at a key path; one at the same key, or at the table right above it, is a consequence of it."""
         key = _key(path)
-        if all(known.key != key for known in self.faults):
+        if any(known.key == key or known.key.rpartition(".")[0] == key != "" for known in self.faults):
+            return
+        if len(self.faults) < MOST_FAULTS:
             self.faults.append(Fault(self.file, line_of(self.text, path), key, found, allowed, mend))
+        elif len(self.faults) == MOST_FAULTS:
+            last = self.text.count("\n") + 1
+            self.faults.append(Fault(self.file, last, "", "further faults are not listed", "mend these first"))
 
     def section(self, model: type[Section], data: Any, path: Path) -> Section | None:
         """A validated section, or None with its faults added."""
@@ -41,10 +53,14 @@ class Collector:
     def quantity(self, value: str | int | float, path: Path) -> Quantity | None:
         """A quantity in SI, or None with a fault."""
         try:
-            return read_quantity(value)
+            quantity = read_quantity(value)
         except QuantityError as error:
             self._quantity_fault(value, path, error)
             return None
+        if quantity.periods:
+            self.fault(path, f"found {shown(value)}", "only computing_delay may be a share of the period")
+            return None
+        return quantity
 
     def time(self, value: str | int | float, path: Path, unit: str = "s") -> float | None:
         """A time that is not negative, in `unit` ("s" or "sample"); None with a fault."""
@@ -72,16 +88,16 @@ class Collector:
             self.expression_fault(value, path, error)
             return None
         names = [*known, "pi"]
+        unknown: dict[str, int] = {}
         for name in names_in(node):
             if name.name not in names:
-                self.fault(
-                    path,
-                    f"found {shown(value)}: column {name.column}: unknown name {name.name!r}",
-                    f"known here: {', '.join(names)}",
-                    closest(name.name, names),
-                )
-                return None
-        return node
+                unknown.setdefault(name.name, name.column)
+        if unknown and self.names_complete:
+            columns = [f"column {column}: unknown name {name!r}" for name, column in unknown.items()]
+            hints = [closest(name, names) for name in unknown]
+            self.fault(path, f"found {shown(value)}: {', '.join(columns)}", f"known here: {', '.join(names)}",
+                       " ".join(hint for hint in hints if hint))  # fmt: skip
+        return None if unknown else node
 
     def expression_fault(self, value: object, path: Path, error: ExpressionError) -> None:
         """A fault of an expression whose column and reason are known."""
@@ -91,19 +107,16 @@ class Collector:
         self.fault(path, f"found {shown(value)}: {error.found}", error.allowed, error.mend)
 
 
-def of_kind(quantity: Quantity, dimension: Dimension) -> bool:
-    """Whether a quantity is of this dimension, or bare and so may be."""
-    return not quantity.stated or quantity.dimension == dimension
+def alike(one: Quantity, other: Quantity) -> bool:
+    """Whether two quantities are of one kind; Hz is not rad/s, and a decibel is no share."""
+    return (one.stated, one.dimension, one.cycles, one.decibel) == (
+        other.stated, other.dimension, other.cycles, other.decibel
+    )  # fmt: skip
 
 
 def units_of(quantity: Quantity) -> tuple[str, str]:
     """The SI unit text of a quantity and the one to show; "" twice when none was stated."""
     return (str(quantity.dimension) if quantity.stated else "", shown_unit(quantity))
-
-
-def known_keys(table: Mapping[str, Any]) -> list[str]:
-    """Keys of a table as text, for messages."""
-    return [str(key) for key in table]
 
 
 def _key(path: Path) -> str:

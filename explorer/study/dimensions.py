@@ -14,6 +14,7 @@ from fractions import Fraction
 
 from explorer.study.expressions import Call, ExpressionError, Name, Node, Number, Operation, constant
 from explorer.study.quantities import Dimension
+from explorer.study.rational import HIGHEST_DEGREE
 
 DIMENSIONLESS = Dimension()
 
@@ -71,12 +72,10 @@ class Inference:
                 node.column,
                 f"adds [{left.dimension}] and [{right.dimension}]; both sides of {node.sign} need one unit",
             )
+        self._note(node, f"adds [{left.dimension}] and [{right.dimension}]")
         if left.open and right.open:
-            self._note(node, "bare numbers are taken to carry what makes both sides one unit")
             return Measured(right.dimension, left.bare and right.bare, stated)
-        known = right if left.open else left
-        self._note(node, f"the bare number is taken to be in [{known.dimension}]")
-        return Measured(known.dimension, stated=stated)
+        return Measured((right if left.open else left).dimension, stated=stated)
 
     def _power(self, node: Operation, base: Measured, exponent: Measured) -> Measured:
         if not (exponent.open or exponent.dimension.is_dimensionless):
@@ -86,8 +85,10 @@ class Inference:
         if base.dimension.is_dimensionless:
             return base
         power = constant(node.right)
-        if power is None:
-            raise ExpressionError(node.column, f"[{base.dimension}] may only be raised to a plain number")
+        if power is None or abs(power) > HIGHEST_DEGREE:
+            raise ExpressionError(
+                node.column, f"[{base.dimension}] may only be raised to a plain number up to {HIGHEST_DEGREE}"
+            )
         return Measured(base.dimension**power, base.bare, base.stated)
 
     def _function(self, node: Call) -> Measured:
@@ -101,10 +102,10 @@ class Inference:
                 raise ExpressionError(
                     node.column, f"{node.function}() takes a pure number, found [{inner.dimension}]"
                 )
-            self._note(node, "the bare number is taken to carry the argument's unit")
+            self._note(node, f"takes {node.function}() of [{inner.dimension}]")
         return Measured(DIMENSIONLESS)
 
-    def _note(self, node: Operation | Call, assumption: str) -> None:
-        note = f"column {node.column}: {assumption}"
+    def _note(self, node: Operation | Call, found: str) -> None:
+        note = f"column {node.column} {found}; a bare number, or a factor 1 not written, is taken to make up for it"
         if note not in self.assumptions:
             self.assumptions.append(note)

@@ -8,7 +8,8 @@ from __future__ import annotations
 
 import difflib
 import re
-from collections.abc import Iterator
+import sys
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from fractions import Fraction
 
@@ -83,6 +84,8 @@ def read_expression(text: str | int | float) -> Node:
         raise ExpressionError(1, f"{text!r} is neither an expression nor a number")
     if isinstance(text, str) and len(text) > LONGEST:
         raise ExpressionError(LONGEST, f"longer than {LONGEST} characters")
+    if isinstance(text, int) and abs(text) > sys.float_info.max:  # its text may be of any length
+        raise ExpressionError(1, "the number is beyond the largest a computer holds")
     return _Parser(str(text)).whole()
 
 
@@ -105,7 +108,7 @@ def depends_on(node: Node, name: str) -> bool:
 def constant(node: Node) -> Fraction | None:
     """The value of a tree of numbers and operators; None when names or functions stand in it."""
     if isinstance(node, Number):
-        return Fraction(node.value).limit_denominator(10**6)
+        return Fraction(repr(node.value))  # the decimal as written: 1.0000001 is no whole number
     if not isinstance(node, Operation) or node.sign == "**":
         return None
     left, right = constant(node.left), constant(node.right)
@@ -118,11 +121,17 @@ def constant(node: Node) -> Fraction | None:
     return left + right if node.sign == "+" else left - right
 
 
-def closest(word: str, known: list[str] | tuple[str, ...]) -> str:
-    """A "did you mean" sentence for a misspelt word, empty when nothing is near."""
+def nearest(word: str, known: Iterable[str]) -> str | None:
+    """The known word a misspelt one was meant for, None when nothing is near."""
     folded = {name.lower(): name for name in known}
-    near = difflib.get_close_matches(word.lower(), list(folded), n=1, cutoff=0.6)
-    return f"Did you mean {folded[near[0]]!r}?" if near else ""
+    near = difflib.get_close_matches(word[:60].lower(), list(folded), n=1, cutoff=0.6)
+    return folded[near[0]] if near else None
+
+
+def closest(word: str, known: Iterable[str]) -> str:
+    """A "did you mean" sentence for a misspelt word, empty when nothing is near."""
+    near = nearest(word, known)
+    return f"Did you mean {near!r}?" if near else ""
 
 
 class _Parser:
@@ -213,8 +222,11 @@ class _Parser:
     def parenthesis(self, opening: int) -> Node:
         self.descend()
         node = self.sum()
-        if self.ahead() != ")":
+        if self.position >= len(self.tokens):
             raise ExpressionError(opening, "this ( is never closed")
+        if self.ahead() != ")":
+            _, text, column = self.tokens[self.position]
+            raise ExpressionError(column, f"{text!r} stands where an operator or ) is expected")
         self.take()
         self.depth -= 1
         return node

@@ -1,7 +1,7 @@
 """Places: a study's text and a key path in, the line where that key stands out, for reading's faults.
 
 No TOML reader tells positions. A key's place is found by trial: rename one candidate, parse again, and see
-whether the value at the path went away.
+whether the value at the path went away or lost a part.
 """
 
 from __future__ import annotations
@@ -13,51 +13,51 @@ from typing import Any
 Path = tuple[str | int, ...]
 
 _MISSING = object()
-_MOST_TRIALS = 60
+_MOST_TRIALS = 200
 
 
 def line_of(text: str, path: Path) -> int | None:
-    """Line (from 1) of the key at `path`, or of its nearest existing parent; None when nothing is found."""
-    data = tomllib.loads(text)
+    """Line (from 1) of the key at `path`, or of its nearest existing parent; None for no text at all."""
+    data = _parsed(text)
     while path:
         if _value(data, path) is not _MISSING:
             line = _existing(text, data, path)
             if line is not None:
                 return line
         path = path[:-1]
-    return None
+    return 1 if text else None
+
+
+def _parsed(text: str) -> Any:
+    """The data with numbers as written, because a NaN equals nothing."""
+    return tomllib.loads(text, parse_float=str)
 
 
 def _existing(text: str, data: Any, path: Path) -> int | None:
-    keys = [index for index, part in enumerate(path) if isinstance(part, str)]
-    key = str(path[keys[-1]])
-    pattern = re.compile(rf"(?<![\w-]){re.escape(key)}(?![\w-])")
+    last = max(index for index, part in enumerate(path) if isinstance(part, str))
+    key, place = str(path[last]), path[last + 1] if last + 1 < len(path) else 0
+    pattern = re.compile(rf"(?<![\w-]){re.escape(key)}(?=[\"']?\s*[=.\]])")
+    elder = 0  # headers of the same array that were passed
     for match in list(pattern.finditer(text))[:_MOST_TRIALS]:
         renamed = f"{text[: match.start()]}{key}-renamed{text[match.end() :]}"
         try:
-            changed = tomllib.loads(renamed)
+            changed = _parsed(renamed)
         except tomllib.TOMLDecodeError:
             continue
-        if _gone(data, changed, path, keys[-1]):
+        before, after = _value(data, path[: last + 1]), _value(changed, path[: last + 1])
+        if _value(changed, path[:last]) is _MISSING or not _shrunk(before, after):
+            continue
+        if after is _MISSING or elder == place:
             return text.count("\n", 0, match.start()) + 1
+        elder += 1
     return None
 
 
-def _gone(data: Any, changed: Any, path: Path, key_index: int) -> bool:
-    """Whether the key at the path, and none of its elder siblings in an array of tables, went away."""
-    parent = path[:key_index]
-    if _value(changed, parent) is _MISSING:
-        return False
-    before, after = _value(data, path), _value(changed, path)
-    if key_index == len(path) - 1:
-        return after is _MISSING
-    place = path[key_index + 1]
-    if not isinstance(place, int):
-        return after is _MISSING
-    array, rest = _value(data, path[: key_index + 1]), _value(changed, path[: key_index + 1])
-    if rest is _MISSING:
-        return place == 0 or len(array) > 1
-    return len(rest) < len(array) and rest[:place] == array[:place] and (after is _MISSING or after != before)
+def _shrunk(before: Any, after: Any) -> bool:
+    """Whether a key went away; a table under several headers only loses a part, an array of tables one of them."""
+    if isinstance(before, list) and isinstance(after, list):
+        return len(after) < len(before)
+    return after is _MISSING or (isinstance(before, dict) and before != after)
 
 
 def _value(data: Any, path: Path) -> Any:

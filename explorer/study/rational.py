@@ -190,12 +190,15 @@ class _Evaluation:
             )
         power = int(exponent)
         if power < 0:
-            return self._power_of(self._inverse(node, base), -power)
-        return self._power_of(base, power)
+            return self._power_of(node, self._inverse(node, base), -power)
+        return self._power_of(node, base, power)
 
-    def _power_of(self, base: Rational, power: int) -> Rational:
+    def _power_of(self, node: Operation, base: Rational, power: int) -> Rational:
         if base.scale.shape[0] > 1 and power > 1:
             raise NotAffineError
+        highest = max((abs(own) * power for _, own in base.factors), default=0)
+        if highest > HIGHEST_DEGREE:  # before powers of powers make lists of millions of factors
+            raise ExpressionError(node.column, f"a power of {highest}; at most {HIGHEST_DEGREE} is allowed")
         return Rational(
             base.scale**power, tuple((factor, own * power) for factor, own in base.factors if power)
         )

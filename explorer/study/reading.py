@@ -16,18 +16,20 @@ import numpy as np
 
 from explorer.errors import Fault, StudyError
 from explorer.study.collect import SECOND, Collector
-from explorer.study.dimensions import Measured
-from explorer.study.expressions import ExpressionError, Name, depends_on
+from explorer.study.dimensions import DIMENSIONLESS, Measured
+from explorer.study.expressions import ExpressionError, Name, depends_on, names_in, read_expression
 from explorer.study.locate import Path
 from explorer.study.loop_part import check_units, read_loop
-from explorer.study.model import Axis, Loop, Measure, Plant, Study
+from explorer.study.model import Axis, Loop, Measure, Parameter, Plant, Study
 from explorer.study.plant_part import parameter_bounds, read_parameters, read_plant
 from explorer.study.quantities import QuantityError, read_quantity
 from explorer.study.requirement_part import read_requirements
-from explorer.study.schema import LoopSection, PlantSection, StudySection, shown
-from explorer.study.sweep_part import read_axes, read_scenarios
+from explorer.study.schema import LoopSection, PlantSection, StudySection, keys_of, respelt, shown
+from explorer.study.sweep_part import check_size, read_axes, read_scenarios
+from explorer.study.trial import try_values
 
 LARGEST_FILE = 64 * 1024  # bytes; a study is a page of text
+DEEPEST = 8  # tables and lists inside each other; state matrices take five
 
 
 def read_study_file(path: str | FilePath, catalogue: Sequence[Measure]) -> Study:
@@ -36,15 +38,15 @@ def read_study_file(path: str | FilePath, catalogue: Sequence[Measure]) -> Study
     try:
         with file.open("rb") as stream:
             raw = stream.read(LARGEST_FILE + 1)
-        text = raw.decode("utf-8")
-    except OSError as error:
-        raise StudyError(
-            [Fault(str(path), None, "", "cannot be read", error.strerror or str(error))]
-        ) from None
+        text = raw.decode("utf-8-sig")  # some editors put a mark before the first line
     except UnicodeDecodeError as error:
-        raise StudyError(
-            [Fault(str(path), None, "", f"byte {error.start} is not UTF-8", "allowed: a TOML text in UTF-8")]
-        ) from None
+        fault = Fault(
+            str(path), None, "", f"byte {error.start} is not UTF-8", "allowed: a TOML text", "Save it as UTF-8."
+        )
+        raise StudyError([fault]) from None
+    except (OSError, ValueError) as error:  # ValueError: a path with a zero byte
+        reason = getattr(error, "strerror", None) or str(error)
+        raise StudyError([Fault(str(path), None, "", "cannot be read", reason)]) from None
     return read_study_text(text, str(path), catalogue)
 
 
@@ -78,62 +80,74 @@ def fault_in(study: Study, path: Path, found: str, error: ExpressionError) -> St
 
 def _parsed(collector: Collector) -> dict[str, Any] | None:
     text, file = collector.text, collector.file
-    if len(text.encode()) > LARGEST_FILE:
+    nested = Fault(file, None, "", "nested too deeply", "allowed: the tables of a study")
+    if len(text.encode(errors="replace")) > LARGEST_FILE:
         collector.faults.append(
             Fault(file, None, "", "the file is too large", f"allowed: {LARGEST_FILE // 1024} KiB")
         )
         return None
     try:
-        return tomllib.loads(text)
+        data = tomllib.loads(text)
+        if not _deeper(data, DEEPEST):
+            return data
+        collector.faults.append(nested)
     except RecursionError:
-        collector.faults.append(Fault(file, None, "", "nested too deeply", "allowed: the tables of a study"))
-    except (tomllib.TOMLDecodeError, ValueError) as error:
+        collector.faults.append(nested)
+    except tomllib.TOMLDecodeError as error:
         message, _, place = str(error).partition(" (at ")
         numbers = [int(word.strip(",)")) for word in place.split() if word.strip(",)").isdigit()]
-        where = f" at column {numbers[1]}" if len(numbers) > 1 else ""
+        line, where = (numbers[0], f" at column {numbers[1]}") if len(numbers) > 1 else (text.count("\n") + 1, "")
         collector.faults.append(
-            Fault(
-                file,
-                numbers[0] if numbers else None,
-                "",
-                f"not TOML{where}: {message}",
-                "see toml.io for the format",
-            )
+            Fault(file, line, "", f"not TOML{where}: {message}", "a text stands in quotes, see toml.io")
         )
+    except ValueError:  # from int(), which refuses thousands of digits
+        collector.faults.append(Fault(file, None, "", "holds a number of thousands of digits", "write 1e30 or the like"))
     return None
+
+
+def _deeper(data: Any, levels: int) -> bool:
+    """Whether tables and lists are nested deeper than that."""
+    if not isinstance(data, dict | list):
+        return False
+    parts = data.values() if isinstance(data, dict) else data
+    return levels == 0 or any(_deeper(part, levels - 1) for part in parts)
 
 
 def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measure]) -> Study | None:
     top = collector.section(StudySection, data, ())
-    tables: dict[str, Any] = {
-        key: data.get(key) if isinstance(data.get(key), dict) else {} for key in ("plant", "loop", "sweep")
-    }
-    plant_table, loop_table, sweep_table = tables["plant"] or {}, tables["loop"] or {}, tables["sweep"] or {}
-    plant_section = collector.section(PlantSection, plant_table, ("plant",)) if "plant" in data else None
-    raw = plant_table.get("parameters")
-    parameters, dimensions = read_parameters(collector, raw if isinstance(raw, dict) else {})
-    sampled_at = _sampled_at(collector, plant_section)
-    time_unit = sampled_at[1] if sampled_at else "s"
-    in_z = plant_section is not None and plant_section.sampled_at is not None
-    period = sampled_at[0] if sampled_at else 0.0
-    plant = read_plant(collector, plant_section, dimensions, period, time_unit) if plant_section else None
-    axes, variables = read_axes(collector, sweep_table, list(parameters), in_z)
-    scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
-    if in_z and sampled_at:
-        axes["period"] = Axis("period", np.array([sampled_at[0]]), time_unit, time_unit, "values")
-    variables["period"] = Measured(SECOND, stated=True)
-    loop = _loop(collector, data, loop_table, [*dimensions, *variables], list(dimensions), time_unit, in_z)
-    wanted = data.get("requirements")
-    rows = [row for row in wanted if isinstance(row, dict)] if isinstance(wanted, list) else []
-    requirements = read_requirements(collector, rows, catalogue, time_unit)
+    spelt = respelt(data, keys_of(StudySection))
+    plant_table, loop_table, sweep_table = (_table(spelt.get(key)) for key in ("plant", "loop", "sweep"))
+    plant_section = collector.section(PlantSection, plant_table, ("plant",)) if plant_table is not None else None
+    raw = plant_section.parameters if plant_section else {}
+    collector.names_complete = sweep_table is not None and not collector.has_fault(("plant",), ("plant", "parameters"))
+    parameters, dimensions = read_parameters(collector, raw)
+    in_z = _in_z(plant_section)
+    sampled_at = _sampled_at(collector, plant_section) if in_z else None
+    period, time_unit = sampled_at or (0.0, "s")
+    plant = read_plant(collector, plant_section, dimensions, in_z, period, time_unit) if plant_section else None
+    axes, variables, scenarios = {}, {}, None
+    if sweep_table is not None:
+        axes, variables = read_axes(collector, sweep_table, list(parameters), in_z, sampled_at is not None)
+        scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
+    if sampled_at:
+        axes["period"] = Axis("period", np.array([period]), time_unit, time_unit, "values")
+    variables["period"] = Measured(SECOND, stated=True) if time_unit == "s" else Measured(DIMENSIONLESS, bare=True)
+    loop = None
+    if loop_table is not None and (section := collector.section(LoopSection, loop_table, ("loop",))):
+        names = [*dimensions, *variables]
+        loop = read_loop(collector, section, names, list(dimensions), time_unit, sampled_at is not None)
+    requirements = read_requirements(collector, spelt.get("requirements"), catalogue, time_unit)
     if plant and loop:
         check_units(collector, plant, loop, dimensions, variables)
         _check_together(collector, plant, loop, axes)
+        try_values(collector, plant, loop, parameters, axes)
     if scenarios and plant:
         times = {plant.dead_time.name} if isinstance(plant.dead_time, Name) else set()
-        parameter_bounds(collector, parameters, max(scenarios.tolerance_scales), times)
+        parameter_bounds(collector, parameters, max(scenarios.tolerance_scales), times, period)
+        check_size(collector, axes, parameters, scenarios)
     if not (top and plant and loop and scenarios and "gain" in axes and "period" in axes):
         return None
+    _note_unused(collector, plant, loop, parameters)
     design = tuple(axis for name, axis in axes.items() if name not in ("gain", "period"))
     return Study(
         title=top.title, plant=plant, parameters=tuple(parameters.values()), loop=loop, gain=axes["gain"],
@@ -143,14 +157,20 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     )  # fmt: skip
 
 
-def _loop(
-    collector: Collector, data: dict[str, Any], table: dict[str, Any],
-    names: list[str], parameters: list[str], time_unit: str, in_z: bool,
-) -> Loop | None:  # fmt: skip
-    if "loop" not in data:
-        return None
-    section = collector.section(LoopSection, table, ("loop",))
-    return read_loop(collector, section, names, parameters, time_unit, in_z) if section else None
+def _table(value: Any) -> dict[str, Any] | None:
+    return value if isinstance(value, dict) else None
+
+
+def _in_z(section: PlantSection | None) -> bool:
+    """Whether the plant is meant in z: by its transfer or, where that has neither s nor z, by sampled_at."""
+    if section is None or section.transfer is None:
+        return False
+    sampled = section.sampled_at is not None
+    try:
+        node = read_expression(section.transfer)
+    except ExpressionError:
+        return sampled
+    return depends_on(node, "z") or (sampled and not depends_on(node, "s"))
 
 
 def _sampled_at(collector: Collector, section: PlantSection | None) -> tuple[float, str] | None:
@@ -191,3 +211,12 @@ def _check_together(collector: Collector, plant: Plant, loop: Loop, axes: dict[s
         if abs(shares - round(shares)) > 1e-9:
             collector.fault(("loop", "computing_delay"), f"found {loop.computing_delay.seconds:g} s",
                             "allowed: a whole number of periods with a plant given in z")  # fmt: skip
+
+
+def _note_unused(collector: Collector, plant: Plant, loop: Loop, parameters: dict[str, Parameter]) -> None:
+    """A parameter that stands nowhere is allowed, but its writer should know."""
+    states = [node for rows in (plant.states or {}).values() for row in rows for node in row]
+    nodes = [plant.transfer, plant.dead_time, loop.compensator, loop.sensor, *states]
+    used = {name.name for node in nodes if node is not None for name in names_in(node)}
+    collector.assumptions += [f"{name} stands in no expression, so it changes nothing" for name in parameters
+                              if name not in used]  # fmt: skip

@@ -17,11 +17,13 @@ _SAMPLES = re.compile(r"\s*(\S+)\s+samples?\s*")
 
 
 def read_requirements(
-    collector: Collector, tables: list[dict[str, Any]], catalogue: Sequence[Measure], time_unit: str
+    collector: Collector, tables: Any, catalogue: Sequence[Measure], time_unit: str
 ) -> list[Requirement]:
     """All requirements in the study's order; time_unit "sample" for a normalised plant."""
     requirements: list[Requirement] = []
-    for index, table in enumerate(tables):
+    for index, table in enumerate(tables if isinstance(tables, list) else []):
+        if not isinstance(table, dict):
+            continue
         path: Path = ("requirements", index)
         section = collector.section(RequirementSection, table, path)
         found = _requirement(collector, section, path, catalogue, time_unit) if section else None
@@ -47,7 +49,7 @@ def _requirement(
     measure = _measure(collector, section, path, catalogue)
     if measure is None:
         return None
-    name = section.name or measure.name
+    name = section.name if section.name is not None else measure.name
     if section.band is not None and measure.band is None:
         collector.fault(
             (*path, "band"), f"found with {measure.name}", "allowed: only with a settling time", "Remove it."
@@ -88,7 +90,8 @@ def read_limit(
     if counted and measure.in_samples and time_unit != "sample":
         number = collector.in_unit(counted.group(1), path, "1", lowest=0.0)
         return None if number is None else (number, True)
-    number = collector.in_unit(value, path, unit_in(measure, time_unit))
+    unit = unit_in(measure, time_unit)
+    number = collector.in_unit(value, path, unit, lowest=-math.inf if unit == "1" else 0.0)
     return None if number is None else (number, False)
 
 
@@ -120,7 +123,7 @@ def _measure(
         place = path if section.basis is None else (*path, "basis")
         allowed = " or ".join(f'"{basis}"' for basis in bases)
         collector.fault(place, found, f"{section.measure} in this version: basis = {allowed}")
-        return None
+        return named[0]  # to read the limit with
     return next(measure for measure in named if measure.basis == section.basis)
 
 

@@ -1,15 +1,18 @@
 """Schema: the parsed tables of a study in, typed sections or a list of structural problems out, for reading.
 
-Each section is validated on its own, so a misspelt key in one does not hide the faults of another.
+Each section is validated on its own, so a misspelt key in one does not hide the faults of another; and a key
+that is near enough to a missing one is read as that one, so that one slip has one message.
 """
 
 from __future__ import annotations
 
+import datetime
+from collections.abc import Iterable, Mapping
 from typing import Annotated, Any, TypeVar
 
 from pydantic import BaseModel, ConfigDict, Field, PlainValidator, ValidationError
 
-from explorer.study.expressions import closest
+from explorer.study.expressions import closest, nearest
 
 Found = tuple[tuple[str | int, ...], str, str, str]  # path inside the section, found, allowed, mend
 
@@ -23,7 +26,7 @@ def _scalar(value: Any) -> str | int | float:
 def _text(value: Any) -> str:
     if not isinstance(value, str) or not value.strip():
         raise ValueError("a text in quotes")
-    if len(value) > 200 or any(ord(letter) < 32 or ord(letter) == 127 for letter in value):
+    if len(value) > 200 or not value.isprintable():  # a terminal or a page would obey the others
         raise ValueError("one line of at most 200 printable characters")
     return value
 
@@ -72,6 +75,12 @@ def _table(value: Any) -> dict[str, Any]:
     return value
 
 
+def _tables(value: Any) -> list[dict[str, Any]]:
+    if not isinstance(value, list) or not value or not all(isinstance(item, dict) for item in value):
+        raise ValueError("one or more tables, each under a line [[requirements]] with two brackets")
+    return value
+
+
 Scalar = Annotated[str | int | float, PlainValidator(_scalar)]
 Text = Annotated[str, PlainValidator(_text)]
 Whole = Annotated[int, PlainValidator(_whole)]
@@ -80,6 +89,7 @@ Scales = Annotated[tuple[float, ...], PlainValidator(_scales)]
 Scalars = Annotated[tuple[str | int | float, ...], PlainValidator(_scalars)]
 Rows = Annotated[tuple[tuple[str | int | float, ...], ...], PlainValidator(_rows)]
 Table = Annotated[dict[str, Any], PlainValidator(_table)]
+Tables = Annotated[list[dict[str, Any]], PlainValidator(_tables)]
 
 
 class _Section(BaseModel):
@@ -93,7 +103,7 @@ class StudySection(_Section):
     plant: Table
     loop: Table
     sweep: Table
-    requirements: list[Table] = Field(min_length=1)
+    requirements: Tables
 
 
 class StatesSection(_Section):
@@ -171,16 +181,47 @@ Section = TypeVar("Section", bound=BaseModel)
 
 
 def validated(model: type[Section], data: Any) -> tuple[Section | None, list[Found]]:
-    """The section, or None and everything that is wrong with its structure."""
+    """The section as far as it can be read without its faulty keys (None: not at all), and all that is wrong with it."""
+    if not isinstance(data, dict):
+        return None, [((), f"found {shown(data)}", "allowed: a table, such as { key = value }", "")]
+    known = keys_of(model)
     try:
         return model.model_validate(data), []
     except ValidationError as error:
-        known = [field.alias or name for name, field in model.model_fields.items()]
-        return None, [_described(dict(item), known) for item in error.errors(include_url=False)]
+        items = error.errors(include_url=False)
+    spelt = respelt(data, known)
+    meant = spelt.keys() - data.keys()
+    problems = [
+        _described(dict(item), known)
+        for item in items
+        if not (item["type"] == "missing" and item["loc"][0] in meant)
+    ]
+    faulty = {item["loc"][0] for item in items} - meant
+    try:
+        return model.model_validate({key: value for key, value in spelt.items() if key not in faulty}), problems
+    except ValidationError:
+        return None, problems
+
+
+def keys_of(model: type[BaseModel]) -> list[str]:
+    """The keys of a section as written in a study."""
+    return [field.alias or name for name, field in model.model_fields.items()]
+
+
+def respelt(table: Mapping[str, Any], known: Iterable[str]) -> dict[str, Any]:
+    """The table with unknown keys renamed to the known ones they are near to, where those are not given."""
+    absent = [name for name in known if name not in table]
+    result: dict[str, Any] = {}
+    for key, value in table.items():
+        near = None if key in known else nearest(key, absent)
+        if near is not None:
+            absent.remove(near)
+        result[near or key] = value
+    return result
 
 
 def _described(item: dict[str, Any], known: list[str]) -> Found:
-    path = tuple(part for part in item["loc"] if not (isinstance(part, str) and "[" in part))
+    path = tuple(item["loc"])
     if item["type"] == "extra_forbidden":
         key = str(path[-1])
         return path, f"unknown key {shown(key)}", f"allowed here: {', '.join(known)}", closest(key, known)
@@ -192,11 +233,16 @@ def _described(item: dict[str, Any], known: list[str]) -> Found:
 
 def shown(value: Any) -> str:
     """A value as its writer would recognise it, control characters escaped and at most 60 characters long."""
-    text = (
-        repr(value)
-        if not isinstance(value, str)
-        else ascii(value)
-        if not value.isprintable()
-        else f'"{value}"'
-    )
+    if isinstance(value, str):
+        text = f'"{value}"' if value.isprintable() else ascii(value)
+    elif isinstance(value, bool):
+        text = str(value).lower()
+    elif isinstance(value, int) and abs(value) >= 10**60:  # its digits may be too many to write out
+        text = "a whole number of more than 60 digits"
+    elif isinstance(value, list | tuple):
+        text = f"[{', '.join(shown(item) for item in value[:60])}]"
+    elif isinstance(value, datetime.date | datetime.time):
+        text = str(value)
+    else:
+        text = "a table" if isinstance(value, dict) else repr(value)
     return text if len(text) <= 60 else text[:57] + "..."

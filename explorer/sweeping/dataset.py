@@ -34,15 +34,16 @@ class Grid:
         self.share = np.zeros((scales, *plane))
         self.tally = np.zeros(len(STATUS_MEANING), np.int64)
         self.first = np.full((len(STATUS_MEANING), 2), np.nan)
+        self.first_tile = np.full(len(STATUS_MEANING), np.iinfo(np.int64).max)
 
     def put(self, tile: Tile, result: TileResult) -> None:
-        """Place one tile; tiles may come in any order, though first examples are kept in tile order."""
+        """Place one tile; tiles may come in any order: first examples are those of the first tile."""
         place = (..., tile.design, slice(tile.start, tile.stop), slice(None))
         self.nominal[place], self.worst[place] = result.nominal, result.worst
         self.worst_scenario[place], self.share[place] = result.worst_scenario, result.share
         self.tally += result.tally
-        fresh = np.isnan(self.first) & ~np.isnan(result.first)
-        self.first[fresh] = result.first[fresh]
+        earlier = ~np.isnan(result.first[:, 0]) & (tile.number < self.first_tile)
+        self.first[earlier], self.first_tile[earlier] = result.first[earlier], tile.number
 
     def dataset(self) -> xarray.Dataset:
         """The Dataset of the contract."""

@@ -3,14 +3,15 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Iterable
+import warnings
+from collections.abc import Callable, Iterable, Iterator
 from pathlib import Path
 
 import joblib
 import xarray
 
 import explorer
-from explorer.errors import OptionError
+from explorer.errors import OptionError, RunError
 from explorer.study.model import Study
 from explorer.sweeping.dataset import Grid
 from explorer.sweeping.reduction import TileResult
@@ -80,13 +81,8 @@ def _in_folder(
     store, file = TileStore(folder, run_key(study)), folder / SWEEP_FILE
     if fresh:
         store.clear()
-    elif file.exists():
-        known = read_dataset(file)
-        if (
-            known.attrs.get("study_sha256") == study.sha256
-            and known.attrs.get("explorer_version") == explorer.__version__
-        ):
-            return known
+    elif (known := _finished(study, file)) is not None:
+        return known
     grid = Grid(study, scenarios)
     missing = []
     for tile in tiles:
@@ -108,15 +104,34 @@ def _in_folder(
     return dataset
 
 
+def _finished(study: Study, file: Path) -> xarray.Dataset | None:
+    """The Dataset of a finished run of this study by this version; None also where the file is damaged."""
+    try:
+        known = read_dataset(file)
+    except RunError:
+        return None
+    same = (known.attrs.get("study_sha256"), known.attrs.get("explorer_version"))
+    return known if same == (study.sha256, explorer.__version__) else None
+
+
 def _computed(
     study: Study, scenarios: Scenarios, tiles: Iterable[Tile], jobs: int
-) -> Iterable[tuple[Tile, TileResult]]:
+) -> Iterator[tuple[Tile, TileResult]]:
     """Tiles as they finish. Threads: LAPACK and the kernels release the interpreter, and nothing is copied."""
 
     def solve(tile: Tile) -> tuple[Tile, TileResult]:
         return tile, compute(study, scenarios, tile)
 
     if jobs == 1:
-        return (solve(tile) for tile in tiles)
+        yield from map(solve, tiles)
+        return
     work = (joblib.delayed(solve)(tile) for tile in tiles)
-    return joblib.Parallel(n_jobs=jobs, prefer="threads", return_as="generator_unordered")(work)  # type: ignore[no-any-return]
+    finished = joblib.Parallel(n_jobs=jobs, prefer="threads", return_as="generator_unordered")(work)
+    try:
+        # not yield from, which would close `finished` before the warning is silenced
+        for pair in finished:  # noqa: UP028
+            yield pair
+    finally:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # joblib counts the tiles that a stopped run left unused
+            finished.close()

@@ -1,0 +1,55 @@
+"""Small studies for the tests: parts of a study file in, its text, Study or sweep out. All data are invented."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import xarray as xr
+
+import explorer
+from explorer.study.model import Study
+
+ONE_PLANT = "{ interior = 0, corners = false, seed = 1, tolerance_scales = [1.0] }"
+
+BY_POLES = """
+[[requirements]]
+measure = "stability"
+[[requirements]]
+name = "damped"
+measure = "damping ratio"
+at_least = 0.4
+[[requirements]]
+name = "quick"
+measure = "settling time"
+basis = "poles"
+at_most = 5
+"""
+
+
+def text_of(
+    transfer: str = "1/(s*(s + 1))",
+    plant: str = "",
+    parameters: str = "",
+    compensator: str = "gain",
+    loop: str = "",
+    gain: str = "{ values = [0.5, 1.0, 2.0] }",
+    period: str = "{ values = [0.1, 0.3] }",
+    axes: str = "",
+    scenarios: str = ONE_PLANT,
+    requirements: str = BY_POLES,
+) -> str:
+    """Text of a study; `plant`, `loop` and `axes` are further lines of their tables, an empty one is left out."""
+    lines = ['title = "small"', "[plant]", f'transfer = "{transfer}"' if transfer else "", plant]
+    lines += ["[plant.parameters]", parameters, "[loop]", f'compensator = "{compensator}"', loop]
+    lines += ["[sweep]", f"gain = {gain}", f"period = {period}" if period else "", axes]
+    return "\n".join([*lines, f"scenarios = {scenarios}", requirements])
+
+
+def study_of(**parts: Any) -> Study:
+    """The Study of text_of(**parts)."""
+    return explorer.read_study(text=text_of(**parts))
+
+
+def swept(**parts: Any) -> xr.Dataset:
+    """The sweep of text_of(**parts), one worker."""
+    return explorer.sweep(study_of(**parts), jobs=1)
