@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, NamedTuple
 
+import numpy as np
 import xarray as xr
 
 import explorer
+from explorer.kernels.roots import Poles, poles
+from explorer.loop.closing import characteristic, groups_of
 from explorer.study.model import Study
 
 ONE_PLANT = "{ interior = 0, corners = false, seed = 1, tolerance_scales = [1.0] }"
@@ -53,3 +56,21 @@ def study_of(**parts: Any) -> Study:
 def swept(**parts: Any) -> xr.Dataset:
     """The sweep of text_of(**parts), one worker."""
     return explorer.sweep(study_of(**parts), jobs=1)
+
+
+class Found(NamedTuple):
+    """The poles of those (scenario, period) pairs that share one delay: found.log_z (M, G, degree)."""
+
+    rows: np.ndarray
+    columns: np.ndarray
+    found: Poles
+
+
+def closed_loop_poles(sampled, compensator, gain):
+    """All poles by companion eigenvalues, one group per whole-sample delay."""
+    for group in groups_of(sampled):
+        polynomials = []
+        for variable in (0, 1):
+            constant, slope = characteristic(sampled, compensator, group, variable)
+            polynomials.append(constant + gain[None, :, None] * slope)
+        yield Found(group.rows, group.columns, poles(*polynomials))

@@ -11,7 +11,8 @@ import math
 import numpy as np
 import pytest
 
-from explorer.measures.by_poles import BY_POLES
+from explorer.kernels.roots import reductions_of
+from explorer.measures.by_poles import BY_POLES, Reduced
 from explorer.measures.catalogue import CATALOGUE
 
 PERIOD, BAND = 0.1, 0.02
@@ -28,7 +29,7 @@ def log_of(z):
 def measured(kind, *poles, period=PERIOD, band=BAND):
     """One measure of one loop from its poles z."""
     log_z = np.array([[log_of(z) for z in poles]], complex).reshape(1, len(poles))
-    return float(BY_POLES[kind](log_z, np.array([period]), band)[0])
+    return float(BY_POLES[kind](Reduced(*reductions_of(log_z)), np.array([period]), band)[0])
 
 
 def pair(real, imaginary):
@@ -143,7 +144,7 @@ def test_unknown_stays_unknown(kind):
     assert math.isnan(measured(kind, math.nan, math.nan))
     # one loop's unknown does not spread to its neighbour
     log_z = np.array([[math.nan, math.nan], [math.log(0.5), math.log(0.2)]], complex)
-    values = BY_POLES[kind](log_z, np.array([PERIOD, PERIOD]), BAND)
+    values = BY_POLES[kind](Reduced(*reductions_of(log_z)), np.array([PERIOD, PERIOD]), BAND)
     assert np.isnan(values[0])
     assert not np.isnan(values[1])
 
@@ -151,9 +152,9 @@ def test_unknown_stays_unknown(kind):
 @pytest.mark.parametrize("kind", BY_POLES)
 def test_shapes_broadcast_over_gains(kind):
     log_z = np.log(np.linspace(0.1, 0.9, 24).reshape(2, 4, 3) * np.exp(1j))
-    values = BY_POLES[kind](log_z, np.array([[0.1], [0.2]]), BAND)
+    values = BY_POLES[kind](Reduced(*reductions_of(log_z)), np.array([[0.1], [0.2]]), BAND)
     assert values.shape == (2, 4)
-    one = BY_POLES[kind](log_z[1, 2], np.array(0.2), BAND)
+    one = BY_POLES[kind](Reduced(*reductions_of(log_z[1, 2])), np.array(0.2), BAND)
     assert values[1, 2] == one
 
 

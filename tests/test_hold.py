@@ -15,11 +15,10 @@ import scipy.linalg
 import scipy.signal
 from mpmath import mp
 from oracle import reference
-from small_study import study_of, swept
+from small_study import closed_loop_poles, study_of, swept
 
 from explorer.kernels.hold import exponential_of_triangle, sample_with_hold
 from explorer.kernels.roots import SOLVED
-from explorer.loop.closing import closed_loop_poles
 from explorer.loop.compensator import compensator_on_axes
 from explorer.loop.plant import Realisation, in_series, realise_states, realise_transfer
 from explorer.loop.sampling import sample

@@ -12,11 +12,11 @@ from hypothesis import strategies as st
 from mpmath import mp
 from oracle import reference
 from scipy.optimize import linear_sum_assignment
-from small_study import study_of, swept
+from small_study import closed_loop_poles, study_of, swept
 
 from explorer.kernels import roots as kernel
 from explorer.kernels.roots import HIGHEST_DEGREE, SOLVED, TOO_LONG, UNCERTIFIED, poles
-from explorer.loop.closing import closed_loop_poles, power_of_z
+from explorer.loop.closing import power_of_z
 from explorer.loop.compensator import compensator_on_axes
 from explorer.loop.sampling import sample
 

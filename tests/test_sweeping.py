@@ -158,7 +158,10 @@ def test_blocks_of_scenarios_do_not_matter(many_tiles, monkeypatch):
     study = study_of(**SPREAD)
     small = explorer.sweep(study, jobs=1)
     monkeypatch.undo()
-    assert same(small, explorer.sweep(study, jobs=1))
+    whole = explorer.sweep(study, jobs=1)
+    for name in ("worst_value", "nominal_value", "share_met"):
+        # a track begins where its neighbour began, so other blocks round otherwise
+        np.testing.assert_allclose(small[name], whole[name], rtol=1e-10)
 
 
 def test_tiles_may_finish_in_any_order(many_tiles):

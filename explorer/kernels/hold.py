@@ -14,24 +14,17 @@ from __future__ import annotations
 import math
 from typing import Any
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
 
-import explorer.kernels  # the cache folder is chosen there
-
-assert explorer.kernels
+from explorer.kernels.compiling import compiled
 
 _WHOLE = 1e-12  # dead times this close to a whole number of samples are that number
 _MOST_SAMPLES = 1e9  # dead times beyond this are this: no loop is solved with anything like it
 _TERMS = 20  # Taylor terms for a norm of at most 1/2: the remainder is below 0.5**20/20! = 4e-25
 
 
-def _kernel(function: Any) -> Any:
-    return numba.njit(cache=True, nogil=True, error_model="numpy")(function)
-
-
-@_kernel
+@compiled()
 def _exponential_minus_one(x: complex) -> complex:
     """exp(x) - 1 without cancellation."""
     half = math.sin(0.5 * x.imag)
@@ -39,13 +32,13 @@ def _exponential_minus_one(x: complex) -> complex:
     return complex(math.expm1(x.real) * math.cos(x.imag) - 2.0 * half * half, grown * math.sin(x.imag))
 
 
-@_kernel
+@compiled()
 def _exponential(x: complex) -> complex:
     grown = math.exp(x.real)
     return complex(grown * math.cos(x.imag), grown * math.sin(x.imag))
 
 
-@_kernel
+@compiled()
 def _divided_difference(x: complex, y: complex) -> complex:
     """exp[x, y] = (exp x - exp y)/(x - y), from the side that cannot overflow."""
     if x == y:
@@ -57,7 +50,7 @@ def _divided_difference(x: complex, y: complex) -> complex:
     return result
 
 
-@_kernel
+@compiled()
 def exponential_of_triangle(
     matrix: NDArray[Any], time: float, result: NDArray[Any], spare: NDArray[Any]
 ) -> None:
@@ -94,7 +87,7 @@ def exponential_of_triangle(
         _put_exact(matrix, time / 2.0 ** (squarings - 1 - squaring), result)
 
 
-@_kernel
+@compiled()
 def _multiply_triangles(
     left: NDArray[Any], right: NDArray[Any], factor: float, product: NDArray[Any]
 ) -> None:
@@ -106,7 +99,7 @@ def _multiply_triangles(
             product[i, j] = total * factor
 
 
-@_kernel
+@compiled()
 def _put_exact(matrix: NDArray[Any], time: float, result: NDArray[Any]) -> None:
     for i in range(matrix.shape[0]):
         result[i, i] = _exponential(matrix[i, i] * time)
@@ -115,7 +108,7 @@ def _put_exact(matrix: NDArray[Any], time: float, result: NDArray[Any]) -> None:
             result[i, i - 1] = matrix[i, i - 1] * time * difference
 
 
-@_kernel
+@compiled()
 def _add_response(
     step: NDArray[Any],
     roots: NDArray[Any],
@@ -155,7 +148,7 @@ def _add_response(
             total[power] += value
 
 
-@_kernel
+@compiled()
 def _times_root(polynomial: NDArray[Any], root: complex, length: int) -> None:
     """polynomial *= (x - root), ascending powers, the top coefficient known to be free."""
     for power in range(length - 1, 0, -1):
@@ -163,7 +156,7 @@ def _times_root(polynomial: NDArray[Any], root: complex, length: int) -> None:
     polynomial[0] = -root * polynomial[0]
 
 
-@_kernel
+@compiled()
 def sample_with_hold(
     state: NDArray[Any],
     start: NDArray[Any],
@@ -214,7 +207,7 @@ def sample_with_hold(
                 )
 
 
-@_kernel
+@compiled()
 def _whole_samples(delay: float, time: float) -> tuple[int, float]:
     """delay = count * time - advance with 0 <= advance < time."""
     samples = min(delay / time, _MOST_SAMPLES)
@@ -225,7 +218,7 @@ def _whole_samples(delay: float, time: float) -> tuple[int, float]:
     return int(count), min(count * time - delay, time)
 
 
-@_kernel
+@compiled()
 def _held_input(
     augmented: NDArray[Any],
     time: float,
@@ -255,7 +248,7 @@ def _held_input(
             early[i] += part[i + 1, j + 1] * rest[j + 1, 0]
 
 
-@_kernel
+@compiled()
 def _transfer(
     state: NDArray[Any],
     full: NDArray[Any],

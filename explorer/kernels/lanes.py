@@ -55,10 +55,10 @@ class Symbol:
     __hash__ = None  # type: ignore[assignment]
 
     def __radd__(self, other: Any) -> Symbol:
-        return self + other
+        return self.__add__(other)
 
     def __rmul__(self, other: Any) -> Symbol:
-        return self * other
+        return self.__mul__(other)
 
     def __rsub__(self, other: Any) -> Symbol:
         return self._make(self.builder.fsub(_splat(float(other)), self.value, flags=_FLAGS))
@@ -192,7 +192,7 @@ def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
     not overlap a source. Returns how many lanes of the last result row are 1.
     """
 
-    @intrinsic
+    @_intrinsic
     def run(typingctx: Any, degree: Any, arguments: Any) -> Any:
         if not isinstance(degree, types.IntegerLiteral):
             raise RequireLiteralValue("degree")
@@ -241,6 +241,10 @@ def _count_ones(builder: ir.IRBuilder, row: Symbol) -> ir.Value:
     truths = builder.fcmp_ordered("==", row.value, _splat(1.0))
     bits = builder.bitcast(truths, ir.IntType(LANES))
     return builder.zext(builder.ctpop(bits), _INDEX)
+
+
+def _intrinsic(function: Any) -> Any:
+    return intrinsic(function)
 
 
 def _splat(number: float) -> ir.Constant:

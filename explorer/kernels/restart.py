@@ -9,25 +9,22 @@ from __future__ import annotations
 import math
 from typing import Any
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
+
+from explorer.kernels.compiling import compiled
 
 Array = NDArray[Any]
 
 
-def _kernel(function: Any) -> Any:
-    return numba.njit(cache=True, nogil=True, error_model="numpy")(function)
-
-
-@_kernel
+@compiled()
 def forget(past: Array, here: int, degree: int) -> None:
     """Take the certificate behind the factors at `here` away."""
     for lane in range(past.shape[1]):
         past[here + degree, lane] = 0.0
 
 
-@_kernel
+@compiled()
 def pair_again(past: Array, here: int, degree: int, steps: Array, index: int, lane: int) -> None:
     """Pair the lane's real roots by which neighbours meet first, in the past too, and predict again.
 
@@ -59,7 +56,7 @@ def pair_again(past: Array, here: int, degree: int, steps: Array, index: int, la
         past[here + row, lane] = total
 
 
-@_kernel
+@compiled()
 def _real_roots(past: Array, first: int, degree: int, lane: int, roots: Array, slots: Array) -> int:
     """Real roots of the lane's factors, descending; slots : rows they come from (u rows, and the linear row)."""
     count, used = 0, 0
@@ -87,7 +84,7 @@ def _real_roots(past: Array, first: int, degree: int, lane: int, roots: Array, s
     return count
 
 
-@_kernel
+@compiled()
 def _pairs(roots: Array, count: int, good: int) -> Array:
     """An order of the sorted real roots in which neighbours that meet first stand together at the front."""
     time = np.empty(max(count - 1, 1))
@@ -116,7 +113,7 @@ def _pairs(roots: Array, count: int, good: int) -> Array:
     return order
 
 
-@_kernel
+@compiled()
 def _put_pairs(
     past: Array, first: int, degree: int, lane: int, roots: Array, slots: Array, order: Array, count: int
 ) -> None:
@@ -127,7 +124,7 @@ def _put_pairs(
         past[first + degree - 1, lane] = -roots[order[count - 1]]
 
 
-@_kernel
+@compiled()
 def solve_afresh(
     constant: Array, slope: Array, at: int, degree: int, gain: float, lane: int, past: Array, here: int
 ) -> None:
@@ -143,9 +140,9 @@ def solve_afresh(
         largest = 0.0
         for i in range(degree):
             x = roots[i]
-            value, slope = 1.0 + 0.0j, 0.0 + 0.0j
+            value, tangent = 1.0 + 0.0j, 0.0 + 0.0j
             for k in range(degree):
-                slope = slope * x + value
+                tangent = tangent * x + value
                 value = value * x + target[k]
             if value == 0.0:
                 continue
@@ -153,7 +150,7 @@ def solve_afresh(
             for j in range(degree):
                 if j != i and roots[j] != x:
                     repulsion += 1.0 / (x - roots[j])
-            step = value / (slope - value * repulsion)
+            step = value / (tangent - value * repulsion)
             if not (math.isfinite(step.real) and math.isfinite(step.imag)):
                 continue
             roots[i] = x - step
@@ -163,7 +160,7 @@ def solve_afresh(
     _group(roots, lane, past, here)
 
 
-@_kernel
+@compiled()
 def _start(target: Array) -> Array:
     """Start values on the circles of the upper hull of (k, log|coefficient of x^k|)."""
     degree = target.shape[0]
@@ -191,7 +188,7 @@ def _start(target: Array) -> Array:
     return roots
 
 
-@_kernel
+@compiled()
 def _group(roots: Array, lane: int, past: Array, here: int) -> None:
     """Roots to real factors: those off the real axis with their mirror images, real ones with their neighbours."""
     degree = roots.shape[0]

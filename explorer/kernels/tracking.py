@@ -12,11 +12,11 @@ import zlib
 from pathlib import Path
 from typing import Any
 
-import numba
 import numpy as np
 from numba import literally
 from numpy.typing import NDArray
 
+from explorer.kernels.compiling import compiled
 from explorer.kernels.factors import IN_Z, advanced, reduced, repeated
 from explorer.kernels.lanes import LANES, emitted
 from explorer.kernels.restart import forget, pair_again, solve_afresh
@@ -40,7 +40,7 @@ def tracker(degree: int, in_z: bool = False) -> Any:
     """
     sources, code = _sources(), degree + (IN_Z if in_z else 0)
 
-    @numba.njit(cache=True, nogil=True, error_model="numpy")
+    @compiled(cache=True)
     def run(
         constant: NDArray[Any],
         slope: NDArray[Any],
@@ -61,7 +61,7 @@ def _sources() -> int:
     return zlib.crc32(b"".join(texts)) + 1
 
 
-@numba.njit(nogil=True, error_model="numpy")
+@compiled(cache=False)  # its callers are cached, with it inside
 def _track(
     degree: int,
     code: int,

@@ -5,13 +5,14 @@ from __future__ import annotations
 import math
 from typing import Any
 
-import numba
 from numpy.typing import NDArray
+
+from explorer.kernels.compiling import compiled
 
 Array = NDArray[Any]
 
 
-@numba.njit(cache=True, nogil=True, error_model="numpy")
+@compiled()
 def keep_worst(
     values: Array,
     pairs: int,
@@ -48,7 +49,7 @@ def keep_worst(
                 worst[level, period, step], place[level, period, step] = value, number
 
 
-@numba.njit(cache=True, nogil=True, error_model="numpy")
+@compiled()
 def count_met(met: Array, pairs: int, column: Array, scale: Array, count: Array) -> None:
     """Add to count (scales, P, G) the loops of `met` (blocks, G, LANES) bool."""
     lanes = met.shape[2]

@@ -51,7 +51,7 @@ def groups_of(sampled: Sampled) -> Iterator[Group]:
 
 def degree_of(sampled: Sampled, compensator: Compensator, delay: int) -> int:
     """Degree of the characteristic polynomial."""
-    return sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay
+    return int(sampled.denominator.shape[-1] + compensator.denominator.shape[-1] - 2 + delay)
 
 
 @np.errstate(over="ignore", invalid="ignore")  # a plant beyond the numbers becomes a status of kernels.roots

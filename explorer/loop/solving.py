@@ -97,6 +97,6 @@ def _solve_rest(
         factor = gain[step[part], None]
         found = poles(*(constant[rows, at] + factor * slope[rows, at] for constant, slope in (in_w, in_z)))
         place = block[part], step[part], slice(None, REDUCTIONS - 1), lane[part]
-        reductions[place] = reductions_of(found.log_z).T
+        reductions[place] = np.where(found.status == SOLVED, reductions_of(found.log_z), np.nan).T
         status[block[part], step[part], lane[part]] = found.status
 

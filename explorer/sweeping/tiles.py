@@ -39,10 +39,11 @@ class Tile(NamedTuple):
 
 
 def tiles_of(study: Study, scenarios: int) -> list[Tile]:
-    """The cut of the grid."""
+    """The cut of the grid; a tile of one scenario holds no more loops than are solved at once."""
     designs = int(np.prod([len(axis.values) for axis in study.design], dtype=int))
     length = len(study.period.values)
-    step = int(np.clip(LOOPS_IN_TILE // (scenarios * len(study.gain.values)), 1, length))
+    gains = len(study.gain.values)
+    step = int(np.clip(min(LOOPS_IN_TILE // (scenarios * gains), LOOPS_AT_ONCE // gains), 1, length))
     cuts = [(design, start) for design in range(designs) for start in range(0, length, step)]
     return [
         Tile(number, design, start, min(start + step, length)) for number, (design, start) in enumerate(cuts)
