@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import contextlib
+import io
 import sys
+import traceback
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
@@ -21,20 +23,26 @@ JSON = click.option(
 
 
 class Commands(click.Group):
-    """The group of commands: turns every error a user can cause into a short message and an exit status."""
+    """The group of commands: turns every error into a short message and an exit status."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        """Take --debug anywhere, for it is added when a command has just failed."""
+        return super().parse_args(ctx, sorted(args, key=lambda word: word != "--debug"))
 
     def invoke(self, ctx: click.Context) -> Any:
-        """Run a command; ExplorerError ends with its own status, Ctrl-C with 3."""
+        """Run a command; ExplorerError ends with its own status, Ctrl-C and what nobody foresaw with 3."""
         try:
             return super().invoke(ctx)
-        except ExplorerError as error:
-            if ctx.params.get("debug"):
-                raise
-            click.echo(str(error), err=True)
-            ctx.exit(error.exit_status)
         except KeyboardInterrupt:
-            click.echo("\nInterrupted. Finished tiles stay; the same command goes on from there.", err=True)
+            click.echo("\nInterrupted. What was finished stays; the same command goes on from there.", err=True)
             ctx.exit(IncompleteError.exit_status)
+        except (click.ClickException, click.exceptions.Exit, click.Abort, BrokenPipeError):
+            raise
+        except Exception as error:
+            if ctx.params.get("debug"):
+                traceback.print_exc()
+            click.echo(described(error), err=True)
+            ctx.exit(getattr(error, "exit_status", IncompleteError.exit_status))
 
 
 @click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
@@ -46,6 +54,9 @@ def main(debug: bool) -> None:
     Exit status: 0 done; 1 the answer is no (--strict); 2 the input is wrong; 3 not completed, what was computed
     stays.
     """
+    for stream in (sys.stdout, sys.stderr):  # a terminal without “ or µ shows a question mark
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")
 
 
 @main.command()
@@ -65,20 +76,20 @@ def check(study: Path, as_data: bool) -> None:
 
 @main.command()
 @STUDY
-@click.option(
-    "--out", type=click.Path(path_type=Path), help="Folder of the run [default: outputs/<stem of STUDY>]."
-)
+@click.option("--out", metavar="DIR", help="Folder of the run [default: outputs/<stem of STUDY>].")
 @click.option("--jobs", type=int, default=-1, show_default=True, help="Worker threads; -1: one per core.")
 @click.option("--fresh", is_flag=True, help="Start over instead of continuing or reusing a run.")
 @click.option("--strict", is_flag=True, help="Exit with status 1 when nothing is feasible.")
-def sweep(study: Path, out: Path | None, jobs: int, fresh: bool, strict: bool) -> None:
+def sweep(study: Path, out: str | None, jobs: int, fresh: bool, strict: bool) -> None:
     """Compute a study: writes sweep.nc, verdict.nc, decision.json and pictures, prints the answer."""
     from explorer import read_study
     from explorer import sweep as swept
     from explorer.views.folder import write_answer
 
+    if out == "":  # from an unset variable; it would mean the folder one stands in
+        raise OptionError("--out: found nothing; allowed: a folder")
     read = read_study(study)
-    folder = out or Path("outputs") / study.stem
+    folder = Path("outputs") / study.stem if out is None else Path(out)
     with progress_line(read.title) as report:
         dataset = swept(read, out=folder, jobs=jobs, fresh=fresh, progress=report)
     run = write_answer(folder, dataset)
@@ -125,8 +136,7 @@ def draw_map(
     """Draw one region picture into the run's folder."""
     from explorer.views.folder import draw
 
-    design = {name: number(name, value) for name, value in pairs(place, "--at").items()}
-    click.echo(draw(folder, show, tolerance_scale, design, kind))
+    click.echo(draw(folder, show, tolerance_scale, pairs(place, "--at"), kind))
 
 
 @main.command()
@@ -143,6 +153,7 @@ def decide(folder: Path, as_data: bool, strict: bool) -> None:
         click.echo(as_json(decision))
     else:
         say(decision["answer"])
+        say(f"Limits: {'; '.join(decision['limits'].splitlines())}.")
     end(strict and not decision["feasible"])
 
 
@@ -177,23 +188,27 @@ def end(no: bool) -> None:
 
 
 def pairs(words: tuple[str, ...], option: str) -> dict[str, str]:
-    """NAME=VALUE words as a mapping; OptionError for any other form."""
+    """NAME=VALUE words as a mapping, split at the last = because names may hold one; OptionError for other forms."""
+    found: dict[str, str] = {}
     for word in words:
-        name, sign, value = word.partition("=")
-        if not (sign and name.strip() and value.strip()):
+        name, _, value = (part.strip() for part in word.rpartition("="))
+        if not (name and value):
             raise OptionError(f"{option}: found {word!r}; allowed: NAME=VALUE")
-    parts = [word.partition("=") for word in words]
-    return {name.strip(): value.strip() for name, _, value in parts}
+        if name in found:
+            raise OptionError(f"{option}: {name!r} stands twice; allowed: one value for each name")
+        found[name] = value
+    return found
 
 
-def number(name: str, value: str) -> float:
-    """A number or quantity in SI; OptionError with the reason otherwise."""
-    from explorer.study.quantities import QuantityError, read_quantity
-
-    try:
-        return read_quantity(value).value
-    except QuantityError as error:
-        raise OptionError(f"{name}: {error}") from None
+def described(error: Exception) -> str:
+    """The message of an error for people who do not read tracebacks."""
+    if isinstance(error, ExplorerError):
+        return str(error)
+    if isinstance(error, MemoryError):
+        return "Out of memory. Sweep fewer points at once, or with fewer --jobs."
+    if isinstance(error, OSError):
+        return f"{error.filename or 'output'}: {error.strerror or error}"
+    return f"Failed with {type(error).__name__}: {error}. This is a fault of explorer; --debug shows where."
 
 
 @contextlib.contextmanager

@@ -45,6 +45,13 @@ def distances(found, exact):
     return relative[rows, columns]
 
 
+def nearest(exact):
+    """Least gap between two poles, relative to their size."""
+    finite = exact[np.isfinite(exact)]
+    gaps = np.abs(finite[:, None] - finite) / np.maximum(np.abs(finite), 1e-300)
+    return (gaps + 9.0 * np.eye(len(finite))).min(initial=9.0)
+
+
 def logarithms(exact):
     """log z of 40-digit poles."""
     return np.array([complex(reference.continuous(z, 1)) for z in exact])
@@ -91,7 +98,11 @@ def residual(polynomial, x):
 def test_backward_error_of_random_sets(roots):
     in_w, in_z = both_readings(roots)
     answer = poles(in_w, in_z)
-    assert answer.status[0] == SOLVED
+    if answer.status[0] != SOLVED:  # several of one multiplicity and another may stay unknown, nothing less
+        assert answer.status[0] == UNCERTIFIED
+        assert np.isnan(answer.log_z).all()
+        assert nearest(np.array(roots) - 1) < 0.01
+        return
     for log_z in answer.log_z[0]:
         with mp.workdps(reference.WORKING_DIGITS):
             z = mp.exp(mp.mpc(log_z)) if np.isfinite(log_z) else mp.zero
@@ -263,13 +274,6 @@ def test_nasty_loops(name):
         assert error < allowed, gain
         assert radius[index] == pytest.approx(np.exp(exact.real.max()), rel=allowed), gain
         assert radius[index] >= 1 or exact.real.max() < 0, gain  # what is marginal never reads stable
-
-
-def nearest(exact):
-    """Least gap between two poles, relative to their size."""
-    finite = exact[np.isfinite(exact)]
-    gaps = np.abs(finite[:, None] - finite) / np.maximum(np.abs(finite), 1e-300)
-    return (gaps + 9.0 * np.eye(len(finite))).min(initial=9.0)
 
 
 @mp.workdps(50)

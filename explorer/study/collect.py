@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass, field
 from typing import Any
@@ -14,7 +15,7 @@ from explorer.study.quantities import Quantity, QuantityError, read_in_unit, rea
 from explorer.study.schema import Section, shown, validated
 
 SECOND = read_quantity("1 s").dimension
-MOST_FAULTS = 40  # finding a line parses the study some times over
+MOST_FAULTS = 25  # finding a line parses the study some times over
 
 
 @dataclass
@@ -120,5 +121,9 @@ def units_of(quantity: Quantity) -> tuple[str, str]:
 
 
 def _key(path: Path) -> str:
-    parts = [f"[{part + 1}]" if isinstance(part, int) else f".{part}" for part in path]
+    parts = [f"[{part + 1}]" if isinstance(part, int) else f".{_as_written(part)}" for part in path]
     return "".join(parts).removeprefix(".")
+
+
+def _as_written(part: str) -> str:
+    return part if re.fullmatch(r"[ \w-]+", part) else shown(part)

@@ -7,11 +7,13 @@ import math
 from explorer.study.collect import SECOND, Collector
 from explorer.study.dimensions import DIMENSIONLESS, Inference, Measured
 from explorer.study.expressions import ExpressionError, Node, closest, depends_on
+from explorer.study.locate import Path
 from explorer.study.model import Delay, Loop, Plant
 from explorer.study.quantities import Dimension, QuantityError, read_quantity
 from explorer.study.schema import LoopSection, shown
 
 CONVERSIONS = ("backward difference", "bilinear", "matched poles and zeros", "bilinear, exact at")
+_RULES = '"backward difference", "bilinear", "matched poles and zeros" or "bilinear, exact at 12 Hz"'
 
 
 def read_loop(
@@ -23,8 +25,12 @@ def read_loop(
     in_z: bool,
 ) -> Loop | None:
     """The loop; `names` may stand in the compensator, `parameters` in the sensor; in_z: the plant is given in z."""
-    compensator = collector.expression(section.compensator, ("loop", "compensator"), [*names, "s", "z"])
-    conversion, exact_at = _conversion(collector, section, compensator)
+    compensator = None
+    if section.compensator is None:
+        collector.fault(("loop", "compensator"), "missing", "compensator must be given")
+    else:
+        compensator = collector.expression(section.compensator, ("loop", "compensator"), [*names, "s", "z"])
+    conversion, exact_at = _conversion(collector, section, compensator, time_unit)
     delay = _computing_delay(collector, section, time_unit, in_z)
     sensor = None
     if section.sensor != 1:
@@ -61,8 +67,10 @@ def read_loop(
     )
 
 
-def _conversion(collector: Collector, section: LoopSection, compensator: Node | None) -> tuple[str, float]:
-    """The rule's name and, for the bilinear rule, the frequency [rad/s] where it is exact (0: plain)."""
+def _conversion(
+    collector: Collector, section: LoopSection, compensator: Node | None, time_unit: str
+) -> tuple[str, float]:
+    """The rule's name and, for the bilinear rule, the frequency [rad/s or rad/sample] where it is exact (0: plain)."""
     path = ("loop", "conversion")
     if compensator is None:
         return "", 0.0
@@ -78,7 +86,7 @@ def _conversion(collector: Collector, section: LoopSection, compensator: Node | 
     if in_s and rule is None:
         collector.fault(("loop", "compensator"), f"found {shown(section.compensator)} in s",
                         "a compensator in s needs a conversion",
-                        f"Add conversion = one of {', '.join(CONVERSIONS)} 12 Hz.")  # fmt: skip
+                        f"Add conversion = {_RULES}.")  # fmt: skip
         return "", 0.0
     if rule is None:
         return "", 0.0
@@ -93,13 +101,12 @@ def _conversion(collector: Collector, section: LoopSection, compensator: Node | 
     if rule in CONVERSIONS[:3]:
         return rule, 0.0
     if rule.startswith(CONVERSIONS[3]):
-        frequency = collector.in_unit(rule.removeprefix(CONVERSIONS[3]).strip(), path, "rad/s", lowest=0.0)
+        unit = f"rad/{time_unit}"
+        frequency = collector.in_unit(rule.removeprefix(CONVERSIONS[3]).strip(), path, unit, lowest=0.0)
         if frequency == 0:
-            collector.fault(path, f"found {shown(rule)}", "allowed: a frequency above 0, such as 12 Hz")
+            collector.fault(path, f"found {shown(rule)}", "allowed: a frequency above 0")
         return "bilinear", frequency or 0.0
-    collector.fault(
-        path, f"found {shown(rule)}", f"allowed: {', '.join(CONVERSIONS)} 12 Hz", closest(rule, CONVERSIONS)
-    )
+    collector.fault(path, f"found {shown(rule)}", f"allowed: {_RULES}", closest(rule, CONVERSIONS))
     return "", 0.0
 
 
@@ -108,10 +115,12 @@ def _computing_delay(collector: Collector, section: LoopSection, time_unit: str,
     path = ("loop", "computing_delay")
     try:
         quantity = read_quantity(section.computing_delay)
-        share = quantity.value if quantity.periods == 1 or quantity.samples == 1 else None
-    except QuantityError:
-        share = None
-    if share is not None:
+    except QuantityError as error:
+        collector.fault(path, f"found {shown(section.computing_delay)}: {error.found}",
+                        'allowed: a time such as "0.4 ms", or a share such as "0.5 period"', error.mend)  # fmt: skip
+        return None
+    if quantity.periods == 1 or quantity.samples == 1:
+        share = quantity.value
         if share < 0 or (in_z and share != round(share)):
             allowed = "allowed: whole periods with a plant given in z" if in_z else "allowed: 0 or more"
             collector.fault(path, f"found {shown(section.computing_delay)}", allowed)
@@ -139,7 +148,11 @@ def check_units(
         "pi": Measured(DIMENSIONLESS),
     }
     around = Measured(DIMENSIONLESS, bare=plant.states is not None)
+    for key, rows in (plant.states or {}).items():
+        for entry in (entry for row in rows for entry in row):
+            _dimension(collector, entry, f"an entry of {key}", ("plant", "states", key), known)
     parts: list[str] = []
+    contradictory = False
     for label, node, path, names in (
         ("plant", plant.transfer, ("plant", "transfer"), known),
         ("sensor", loop.sensor, ("loop", "sensor"), known),
@@ -147,18 +160,14 @@ def check_units(
     ):
         if node is None:
             continue
-        inference = Inference(names)
-        try:
-            measured = inference.of(node)
-        except ExpressionError as error:
-            collector.expression_fault(
-                {"plant": plant.text, "sensor": loop.sensor_text}.get(label, loop.text), path, error
-            )
-            return
-        collector.assumptions += [f"{'.'.join(path)}: {note}" for note in inference.assumptions]
+        text = {"plant": plant.text, "sensor": loop.sensor_text}.get(label, loop.text)
+        measured = _dimension(collector, node, text, path, names)
+        if measured is None:
+            contradictory = True
+            continue
         around = Measured(around.dimension * measured.dimension, around.bare or measured.open, True)
         parts.append(f"{label} [{measured.dimension}]")
-    if around.dimension.is_dimensionless:
+    if contradictory or around.dimension.is_dimensionless:
         return
     if around.bare:
         collector.assumptions.append(
@@ -170,3 +179,18 @@ def check_units(
         ("loop", "compensator"), f"the gain around the loop is in [{around.dimension}]: {', '.join(parts)}",
         "allowed: units that cancel around the loop", "Check the unit of the gain and of the plant's parameters.",
     )  # fmt: skip
+
+
+def _dimension(
+    collector: Collector, node: Node, text: str, path: Path, names: dict[str, Measured]
+) -> Measured | None:
+    """The dimension of an expression, with what was assumed noted; None with a fault where units contradict."""
+    inference = Inference(names)
+    try:
+        measured = inference.of(node)
+    except ExpressionError as error:
+        collector.expression_fault(text, path, error)
+        return None
+    place = ".".join(str(part) for part in path)
+    collector.assumptions += [f"{place}: {note}" for note in inference.assumptions]
+    return measured

@@ -5,14 +5,15 @@ from __future__ import annotations
 import re
 from typing import Any
 
-from explorer.study.collect import SECOND, Collector, units_of
-from explorer.study.dimensions import Measured
+from explorer.study.collect import SECOND, Collector, alike, units_of
+from explorer.study.dimensions import DIMENSIONLESS, Measured
 from explorer.study.expressions import FUNCTIONS, Name, Node, Number, closest, depends_on
 from explorer.study.locate import Path
 from explorer.study.model import RESERVED, Parameter, Plant
 from explorer.study.quantities import Dimension, Quantity, QuantityError, read_quantity
 from explorer.study.schema import ParameterSection, PlantSection, StatesSection, shown
 
+MOST_PARAMETERS = 100
 _NAME = re.compile(r"[A-Za-z_μ][A-Za-z_0-9]{0,39}")
 
 
@@ -38,6 +39,10 @@ def read_parameters(
     """All parameters by name, and their dimensions; faulty ones keep a place so that expressions still read."""
     parameters: dict[str, Parameter] = {}
     dimensions: dict[str, Measured] = {}
+    if len(table) > MOST_PARAMETERS:
+        collector.fault(("plant", "parameters"), f"found {len(table)}", f"allowed: at most {MOST_PARAMETERS}")
+        collector.names_complete = False
+        return {}, {}
     for key, value in table.items():
         path: Path = ("plant", "parameters", key)
         if not usable_name(collector, key, path):
@@ -78,42 +83,48 @@ def _parameter(
 def _nominal(
     collector: Collector, name: str, section: ParameterSection, path: Path
 ) -> tuple[Parameter, Measured] | None:
-    nominal = collector.quantity(section.nominal or 0, (*path, "nominal"))
-    if nominal is None:
+    assert section.nominal is not None
+    nominal = collector.quantity(section.nominal, (*path, "nominal"))
+    half = _half_width(collector, section.tolerance, nominal, (*path, "tolerance"))
+    if nominal is None or half is None:
         return None
-    half = 0.0
-    if section.tolerance is not None:
-        tolerance = collector.quantity(section.tolerance, (*path, "tolerance"))
-        if tolerance is None:
-            return None
-        if tolerance.unit == "%":
-            half = abs(nominal.value) * tolerance.value
-        elif tolerance.stated == nominal.stated and tolerance.dimension == nominal.dimension:
-            half = tolerance.value
-        else:
-            unit = f"[{nominal.dimension}]" if nominal.stated else "a bare number"
-            collector.fault(
-                (*path, "tolerance"), f"found {shown(section.tolerance)}",
-                f"allowed: a share such as \"5 %\", or an amount in the unit of the nominal value, {unit}",
-            )  # fmt: skip
-            return None
-        if half < 0:
-            collector.fault((*path, "tolerance"), f"found {shown(section.tolerance)}", "allowed: 0 or more")
-            return None
     parameter = Parameter(name, nominal.value, nominal.value - half, nominal.value + half, *units_of(nominal))
     return parameter, Measured(nominal.dimension, not nominal.stated, nominal.stated)
 
 
+def _half_width(
+    collector: Collector, value: str | int | float | None, nominal: Quantity | None, path: Path
+) -> float | None:
+    """What a tolerance comes to in the unit of the nominal value; None with a fault."""
+    tolerance = None if value is None else collector.quantity(value, path)
+    if value is None or tolerance is None or nominal is None:
+        return 0.0 if value is None else None
+    half = tolerance.value
+    if tolerance.unit == "%":
+        half *= abs(nominal.value)
+        if nominal.value == 0 and tolerance.value > 0:
+            collector.fault(path, f"found {shown(value)} of a nominal 0", "any share of 0 is 0", "Give an amount.")
+            return None
+    elif not alike(tolerance, nominal) or tolerance.decibel:
+        unit = f"in the unit of the nominal value, {nominal.unit}" if nominal.stated else "without a unit"
+        amount = "" if nominal.decibel else f", or an amount {unit}"
+        collector.fault(path, f"found {shown(value)}", f'allowed: a share such as "5 %"{amount}')
+        return None
+    if half < 0:
+        collector.fault(path, f"found {shown(value)}", "allowed: 0 or more")
+        return None
+    return half
+
+
 def _alike(collector: Collector, quantities: list[Quantity | None], path: Path) -> list[Quantity] | None:
-    """The quantities when all were read and share one dimension (or are all bare)."""
+    """The quantities when all were read and are of one kind (or all bare)."""
     known = [quantity for quantity in quantities if quantity is not None]
     if len(known) < len(quantities):
         return None
-    first = known[0]
     for other in known[1:]:
-        if other.stated != first.stated or other.dimension != first.dimension:
+        if not alike(known[0], other):
             collector.fault(
-                path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit for all values"
+                path, f"found {shown(known[0].text)} and {shown(other.text)}", "allowed: one unit for all values"
             )
             return None
     return known
@@ -122,10 +133,8 @@ def _alike(collector: Collector, quantities: list[Quantity | None], path: Path) 
 def _range(
     collector: Collector, name: str, section: ParameterSection, path: Path
 ) -> tuple[Parameter, Measured] | None:
-    ends = [
-        collector.quantity(section.from_ or 0, (*path, "from")),
-        collector.quantity(section.to or 0, (*path, "to")),
-    ]
+    assert section.from_ is not None and section.to is not None
+    ends = [collector.quantity(section.from_, (*path, "from")), collector.quantity(section.to, (*path, "to"))]
     if section.nominal is not None:
         ends.append(collector.quantity(section.nominal, (*path, "nominal")))
     known = _alike(collector, ends, path)
@@ -175,16 +184,17 @@ def read_plant(
     collector: Collector,
     section: PlantSection,
     dimensions: dict[str, Measured],
+    in_z: bool,
     sampled_at: float,
     time_unit: str,
 ) -> Plant | None:
-    """The plant by transfer in s or z, or by matrices; sampled_at 0 for s, time_unit "s" or "sample"."""
-    if (section.transfer is None) == (section.states is None):
-        collector.fault(
-            ("plant",),
-            "found " + ("both" if section.transfer else "neither"),
-            "allowed: transfer or states, one of them",
-        )
+    """The plant by transfer in s or z, or by matrices; sampled_at 0 where not known, time_unit "s" or "sample"."""
+    if section.transfer is None and section.states is None:
+        if not collector.has_fault(("plant", "states")):
+            collector.fault(("plant", "transfer"), "missing", "a plant is given by transfer or by states")
+        return None
+    if section.transfer is not None and section.states is not None:
+        collector.fault(("plant", "states"), "found beside transfer", "allowed: transfer or states, one of them")
         return None
     dead_time = _dead_time(collector, section, dimensions, sampled_at, time_unit)
     if section.states is not None:
@@ -197,11 +207,11 @@ def read_plant(
             )
         states = _states(collector, section.states, dimensions)
         return Plant("s", None, states, dead_time, None, "state matrices") if states else None
-    node = collector.expression(section.transfer or 0, ("plant", "transfer"), ["s", "z", *dimensions])
+    assert section.transfer is not None
+    node = collector.expression(section.transfer, ("plant", "transfer"), ["s", "z", *dimensions])
     if node is None:
         return None
-    in_z = depends_on(node, "z")
-    if in_z and depends_on(node, "s"):
+    if depends_on(node, "z") and depends_on(node, "s"):
         collector.fault(
             ("plant", "transfer"),
             f"found {shown(section.transfer)} with s and z",
@@ -230,16 +240,19 @@ def _dead_time(
 ) -> Node | None:
     """A parameter's name, a time, or whole samples for a plant in z; None for none."""
     value, path = section.dead_time, ("plant", "dead_time")
-    if isinstance(value, str) and _NAME.fullmatch(value.strip()):
-        name = value.strip()
-        if name not in dimensions:
-            collector.fault(path, f"found {shown(value)}", "allowed: a time, or the name of a parameter",
-                            closest(name, list(dimensions)))  # fmt: skip
-            return None
+    allowed = 'allowed: a time such as "1.2 ms", or the name of a parameter'
+    name = value.strip().replace("\u00b5", "\u03bc") if isinstance(value, str) else ""
+    if name in dimensions:
         measured = dimensions[name]
-        if not measured.bare and measured.dimension != SECOND and time_unit == "s":
-            collector.fault(path, f"{name} is in [{measured.dimension}]", "allowed: a parameter in [s]")
+        wanted = SECOND if time_unit == "s" else DIMENSIONLESS
+        if not measured.bare and measured.dimension != wanted:
+            unit = "[s]" if time_unit == "s" else "samples"
+            collector.fault(path, f"{name} is in [{measured.dimension}]", f"allowed: a parameter in {unit}")
         return Name(name, 1)
+    if isinstance(value, str) and name[:1] not in tuple("+-.0123456789"):
+        if collector.names_complete:
+            collector.fault(path, f"found {shown(value)}", allowed, closest(name, dimensions))
+        return None
     samples = _samples(value) if sampled_at else None
     time = collector.time(value, path, time_unit) if samples is None else samples * sampled_at
     if time is not None and sampled_at and abs(time / sampled_at - round(time / sampled_at)) > 1e-9:
@@ -275,6 +288,8 @@ def _states(
         if (len(entries), len(entries[0])) != (rows, columns):
             collector.fault((*path, key), f"found {len(entries)} × {len(entries[0])} entries",
                             f"allowed: {rows} × {columns} (one input, one output, A of order {order})")  # fmt: skip
+            if key == "A":
+                return None
             continue
         nodes = [[collector.expression(entry, (*path, key), dimensions) for entry in row] for row in entries]
         if all(node is not None for row in nodes for node in row):
@@ -284,11 +299,18 @@ def _states(
 
 
 def parameter_bounds(
-    collector: Collector, parameters: dict[str, Parameter], scale: float, times: set[str]
+    collector: Collector, parameters: dict[str, Parameter], scale: float, times: set[str], sampled_at: float
 ) -> None:
-    """Faults where a scaled tolerance changes a parameter's sign, or makes a time negative."""
+    """Faults where a scaled tolerance changes a parameter's sign, or makes a time negative or no whole samples."""
     for parameter in parameters.values():
         low, high = parameter.reach(scale)
+        if sampled_at and parameter.name in times:
+            samples = [value / sampled_at for value in (*parameter.variants, parameter.nominal)]
+            if parameter.varies or any(abs(value - round(value)) > 1e-9 for value in samples):
+                collector.fault(
+                    ("plant", "parameters", parameter.name), "found a dead time between samples",
+                    "allowed: whole samples with a plant given in z", "Give it as exact, or by any_of.",
+                )  # fmt: skip
         within = parameter.low * parameter.high > 0
         negative_time = parameter.name in times and min(low, *parameter.variants, parameter.low) < 0
         if negative_time or (within and low * high <= 0):

@@ -69,6 +69,11 @@ class Rational:
                 product = multiply(product, factor)
         return product
 
+    def degrees(self) -> tuple[int, int]:
+        """Degrees of the numerator and of the denominator, without expanding them."""
+        sizes = [(factor.shape[-1] - 1) * power for factor, power in self.factors]
+        return sum(size for size in sizes if size > 0), -sum(size for size in sizes if size < 0)
+
     def denominator_factors(self) -> list[Array]:
         """Denominator factors, each (*batch, m+1) and repeated as often as it stands."""
         return [factor[0] for factor, power in self.factors for _ in range(-power)]

@@ -7,6 +7,7 @@ goes and adds what it finds, then the parts are checked against each other.
 from __future__ import annotations
 
 import hashlib
+import re
 import tomllib
 from collections.abc import Sequence
 from pathlib import Path as FilePath
@@ -25,11 +26,12 @@ from explorer.study.plant_part import parameter_bounds, read_parameters, read_pl
 from explorer.study.quantities import QuantityError, read_quantity
 from explorer.study.requirement_part import read_requirements
 from explorer.study.schema import LoopSection, PlantSection, StudySection, keys_of, respelt, shown
-from explorer.study.sweep_part import check_size, read_axes, read_scenarios
+from explorer.study.sweep_part import check_size, read_axes, read_scenarios, spelt_axes
 from explorer.study.trial import try_values
 
 LARGEST_FILE = 64 * 1024  # bytes; a study is a page of text
 DEEPEST = 8  # tables and lists inside each other; state matrices take five
+_DOTTED = re.compile(r"""(?<![\w.'"-])(?:[\w'"-]++\s*+\.\s*+){40}""")  # a.a.a..., which takes the parser seconds
 
 
 def read_study_file(path: str | FilePath, catalogue: Sequence[Measure]) -> Study:
@@ -38,7 +40,7 @@ def read_study_file(path: str | FilePath, catalogue: Sequence[Measure]) -> Study
     try:
         with file.open("rb") as stream:
             raw = stream.read(LARGEST_FILE + 1)
-        text = raw.decode("utf-8-sig")  # some editors put a mark before the first line
+        text = raw.decode("utf-8")
     except UnicodeDecodeError as error:
         fault = Fault(
             str(path), None, "", f"byte {error.start} is not UTF-8", "allowed: a TOML text", "Save it as UTF-8."
@@ -61,7 +63,7 @@ def read_study_text(text: str, file: str, catalogue: Sequence[Measure]) -> Study
     ------
     StudyError : carrying all faults, each with line, key, what was found, what is allowed, how to mend it.
     """
-    collector = Collector(text, file)
+    collector = Collector(text.removeprefix("\ufeff"), file)  # a mark that some editors put first
     data = _parsed(collector)
     if data is None:
         raise StudyError(collector.faults)
@@ -87,8 +89,8 @@ def _parsed(collector: Collector) -> dict[str, Any] | None:
         )
         return None
     try:
-        data = tomllib.loads(text)
-        if not _deeper(data, DEEPEST):
+        data = None if _DOTTED.search(text) else tomllib.loads(text)
+        if data is not None and not _deeper(data, DEEPEST):
             return data
         collector.faults.append(nested)
     except RecursionError:
@@ -101,7 +103,8 @@ def _parsed(collector: Collector) -> dict[str, Any] | None:
             Fault(file, line, "", f"not TOML{where}: {message}", "a text stands in quotes, see toml.io")
         )
     except ValueError:  # from int(), which refuses thousands of digits
-        collector.faults.append(Fault(file, None, "", "holds a number of thousands of digits", "write 1e30 or the like"))
+        digits = Fault(file, None, "", "holds a number of thousands of digits", "a number is written like 1.5e30")
+        collector.faults.append(digits)
     return None
 
 
@@ -125,9 +128,12 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     sampled_at = _sampled_at(collector, plant_section) if in_z else None
     period, time_unit = sampled_at or (0.0, "s")
     plant = read_plant(collector, plant_section, dimensions, in_z, period, time_unit) if plant_section else None
-    axes, variables, scenarios = {}, {}, None
+    axes: dict[str, Axis] = {}
+    variables: dict[str, Measured] = {}
+    scenarios = None
     if sweep_table is not None:
-        axes, variables = read_axes(collector, sweep_table, list(parameters), in_z, sampled_at is not None)
+        sweep_table = spelt_axes(collector, sweep_table, in_z)
+        axes, variables = read_axes(collector, sweep_table, list(parameters), sampled_at is not None)
         scenarios = read_scenarios(collector, sweep_table.get("scenarios", {}))
     if sampled_at:
         axes["period"] = Axis("period", np.array([period]), time_unit, time_unit, "values")
@@ -140,11 +146,13 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     if plant and loop:
         check_units(collector, plant, loop, dimensions, variables)
         _check_together(collector, plant, loop, axes)
-        try_values(collector, plant, loop, parameters, axes)
     if scenarios and plant:
-        times = {plant.dead_time.name} if isinstance(plant.dead_time, Name) else set()
+        known_time = isinstance(plant.dead_time, Name) and not collector.has_fault(("plant", "dead_time"))
+        times = {name.name for name in names_in(plant.dead_time)} if plant.dead_time and known_time else set()
         parameter_bounds(collector, parameters, max(scenarios.tolerance_scales), times, period)
         check_size(collector, axes, parameters, scenarios)
+    if plant and loop:
+        try_values(collector, plant, loop, parameters, axes, scenarios.tolerance_scales if scenarios else (1.0,))
     if not (top and plant and loop and scenarios and "gain" in axes and "period" in axes):
         return None
     _note_unused(collector, plant, loop, parameters)
@@ -202,9 +210,10 @@ def _check_together(collector: Collector, plant: Plant, loop: Loop, axes: dict[s
         return
     period = axes["period"].values
     if loop.exact_at * period[-1] >= np.pi:
+        unit = f"cycles per {axes['period'].unit}"
         collector.fault(
-            ("loop", "conversion"), f"exact at {loop.exact_at / (2 * np.pi):g} Hz",
-            f"allowed: below half the sampling rate at the longest period, {0.5 / period[-1]:g} Hz",
+            ("loop", "conversion"), f"exact at {loop.exact_at / (2 * np.pi):g} {unit}",
+            f"allowed: below half the sampling rate at the longest period, {0.5 / period[-1]:g} {unit}",
         )  # fmt: skip
     if plant.variable == "z":
         shares = loop.computing_delay.seconds / period[0]

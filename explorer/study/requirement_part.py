@@ -13,6 +13,7 @@ from explorer.study.locate import Path
 from explorer.study.model import Measure, Requirement
 from explorer.study.schema import RequirementSection, shown
 
+_NEVER_NEGATIVE = ("s", "sample", "rad/s", "rad/sample", "%")
 _SAMPLES = re.compile(r"\s*(\S+)\s+samples?\s*")
 
 
@@ -91,7 +92,7 @@ def read_limit(
         number = collector.in_unit(counted.group(1), path, "1", lowest=0.0)
         return None if number is None else (number, True)
     unit = unit_in(measure, time_unit)
-    number = collector.in_unit(value, path, unit, lowest=-math.inf if unit == "1" else 0.0)
+    number = collector.in_unit(value, path, unit, lowest=0.0 if unit in _NEVER_NEGATIVE else -math.inf)
     return None if number is None else (number, False)
 
 

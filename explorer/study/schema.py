@@ -61,10 +61,8 @@ def _scalars(value: Any) -> tuple[str | int | float, ...]:
 
 def _rows(value: Any) -> tuple[tuple[str | int | float, ...], ...]:
     allowed = "a matrix: a list of rows, each a list of at most 24 numbers or expressions, all of one length"
-    if not isinstance(value, list) or not 0 < len(value) <= 24:
-        raise ValueError(allowed)
-    rows = [row if isinstance(row, list) else [row] for row in value]
-    if len({len(row) for row in rows}) != 1 or not 0 < len(rows[0]) <= 24:
+    rows = [row if isinstance(row, list) else [row] for row in (value if isinstance(value, list) else [value])]
+    if not 0 < len(rows) <= 24 or len({len(row) for row in rows}) != 1 or not 0 < len(rows[0]) <= 24:
         raise ValueError(allowed)
     return tuple(tuple(_scalar(item) for item in row) for row in rows)
 
@@ -138,7 +136,7 @@ class ParameterSection(_Section):
 class LoopSection(_Section):
     """[loop]."""
 
-    compensator: Scalar
+    compensator: Scalar | None = None
     conversion: Text | None = None
     computing_delay: Scalar = 0
     sensor: Scalar = 1
@@ -181,10 +179,10 @@ Section = TypeVar("Section", bound=BaseModel)
 
 
 def validated(model: type[Section], data: Any) -> tuple[Section | None, list[Found]]:
-    """The section as far as it can be read without its faulty keys (None: not at all), and all that is wrong with it."""
-    if not isinstance(data, dict):
-        return None, [((), f"found {shown(data)}", "allowed: a table, such as { key = value }", "")]
+    """The section as read without its faulty keys (None where that leaves too little), and everything wrong with it."""
     known = keys_of(model)
+    if not isinstance(data, dict):
+        return None, [((), f"found {shown(data)}", f"allowed: a table with some of {', '.join(known)}", "")]
     try:
         return model.model_validate(data), []
     except ValidationError as error:

@@ -2,19 +2,42 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
 
-from explorer.study.collect import Collector, units_of
-from explorer.study.dimensions import Measured
+from explorer.study.collect import Collector, alike, units_of
+from explorer.study.dimensions import DIMENSIONLESS, Measured
+from explorer.study.expressions import closest
 from explorer.study.locate import Path
-from explorer.study.model import Axis, ScenarioPlan
+from explorer.study.model import Axis, Parameter, ScenarioPlan
 from explorer.study.plant_part import usable_name
-from explorer.study.quantities import Dimension, Quantity
-from explorer.study.schema import AxisSection, ScenarioSection, shown
+from explorer.study.quantities import Quantity
+from explorer.study.schema import AxisSection, ScenarioSection, keys_of, respelt, shown
 
 MOST_POINTS = 100_000
+MOST_CELLS = 10_000_000  # points of all axes together; their results are held in memory
+MOST_SCENARIOS = 1_000_000
+MOST_VARIABLES = 20  # files and arrays end at 32 dimensions
+_PLAN_KEYS = set(keys_of(ScenarioSection))
+
+
+def spelt_axes(collector: Collector, table: dict[str, Any], in_z: bool) -> dict[str, Any]:
+    """[sweep] with a misspelt gain, period or scenarios under its right name; faults for these and missing axes."""
+    required = ("gain",) if in_z else ("gain", "period")
+    plans = [key for key, value in table.items() if isinstance(value, dict) and value.keys() & _PLAN_KEYS]
+    spelt = respelt({key: value for key, value in table.items() if key not in plans}, required)
+    spelt |= respelt({key: table[key] for key in plans}, ("scenarios",))
+    for key in table.keys() - spelt.keys():
+        collector.fault(
+            ("sweep", key), f"found {shown(key)}", "gain, period and scenarios are spelt so",
+            closest(key, (*required, "scenarios")),
+        )  # fmt: skip
+    for name in required:
+        if name not in spelt:
+            collector.fault(("sweep", name), "missing", f"an axis for the {name} must be given")
+    return spelt
 
 
 def read_axes(
@@ -25,10 +48,13 @@ def read_axes(
     taken : parameter names; fixed_period : the plant is given in z, which leaves no period to sweep.
     """
     axes: dict[str, Axis] = {}
-    dimensions: dict[str, Measured] = {}
-    for required in ("gain",) if fixed_period else ("gain", "period"):
-        if required not in table:
-            collector.fault(("sweep", required), "missing", f"an axis for the {required} must be given")
+    dimensions = {"gain": Measured(DIMENSIONLESS, bare=True)}
+    further = [key for key in table if key not in ("gain", "period", "scenarios")]
+    if len(further) > MOST_VARIABLES:
+        collector.fault(
+            ("sweep", further[MOST_VARIABLES]), f"found {len(further)} design variables besides gain and period",
+            f"allowed: at most {MOST_VARIABLES}",
+        )  # fmt: skip
     for key, value in table.items():
         path: Path = ("sweep", key)
         if key == "scenarios":
@@ -38,18 +64,19 @@ def read_axes(
                 path, "found a period axis", "a plant given in z is known at one period only", "Remove it."
             )
             continue
-        if key not in ("gain", "period") and not usable_name(collector, key, path):
+        if key in further and not usable_name(collector, key, path):
             continue
         if key in taken:
             collector.fault(
                 path, f"the name {key!r} is a plant parameter too", "allowed: one meaning per name"
             )
             continue
-        dimensions[key] = Measured(Dimension(), bare=True)
+        name = key.replace("\u00b5", "\u03bc")
+        dimensions[name] = Measured(DIMENSIONLESS, bare=True)
         section = collector.section(AxisSection, value, path)
-        found = _axis(collector, key, section, path) if section else None
+        found = _axis(collector, name, section, path) if section else None
         if found:
-            axes[key], dimensions[key] = found
+            axes[name], dimensions[name] = found
     return axes, dimensions
 
 
@@ -69,11 +96,30 @@ def read_scenarios(collector: Collector, table: Any) -> ScenarioPlan | None:
         key = "interior" if section.interior > MOST_POINTS else "seed"
         collector.fault(
             (*path, key),
-            f"found {getattr(section, key)}",
+            f"found {shown(getattr(section, key))}",
             f"allowed: up to {MOST_POINTS if key == 'interior' else '2^63 - 1'}",
         )
         return None
     return ScenarioPlan(section.interior, section.corners, section.seed, section.tolerance_scales)
+
+
+def check_size(
+    collector: Collector, axes: dict[str, Axis], parameters: dict[str, Parameter], plan: ScenarioPlan
+) -> None:
+    """Faults where the grid or the table of scenarios would not fit into a computer."""
+    cells = math.prod(len(axis.values) for axis in axes.values())
+    if cells > MOST_CELLS:
+        collector.fault(("sweep",), f"the axes hold {cells:.3g} points together", f"allowed: up to {MOST_CELLS:.0e}",
+                        "Give an axis fewer points.")  # fmt: skip
+    variants = math.prod(len(parameter.variants) or 1 for parameter in parameters.values())
+    corners = 2 ** min(10, sum(parameter.varies for parameter in parameters.values())) if plan.corners else 0
+    scales = sum(scale > 0 for scale in plan.tolerance_scales)
+    scenarios = variants * (1 + scales * (corners + plan.interior))
+    if scenarios > MOST_SCENARIOS:
+        collector.fault(
+            ("sweep", "scenarios"), f"these and {variants} combinations of any_of make {scenarios:.3g} scenarios",
+            f"allowed: up to {MOST_SCENARIOS:.0e}", "Lower interior, or name fewer variants or scales.",
+        )  # fmt: skip
 
 
 def _axis(collector: Collector, name: str, section: AxisSection, path: Path) -> tuple[Axis, Measured] | None:
@@ -101,7 +147,7 @@ def _axis(collector: Collector, name: str, section: AxisSection, path: Path) -> 
     if not 2 <= section.points <= MOST_POINTS:
         collector.fault(
             (*path, "points"),
-            f"found {section.points}",
+            f"found {shown(section.points)}",
             f"allowed: 2 to {MOST_POINTS} (one value: values = [...])",
         )
         return None
@@ -122,7 +168,7 @@ def _checked(
         return None
     first = known[0]
     for other in known[1:]:
-        if (other.stated, other.dimension) != (first.stated, first.dimension):
+        if not alike(first, other):
             collector.fault(
                 path, f"found {shown(first.text)} and {shown(other.text)}", "allowed: one unit along an axis"
             )

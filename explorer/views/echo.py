@@ -47,6 +47,7 @@ def understood(study: Study, scenarios: Scenarios, needed: Estimate) -> dict[str
             "computing_delay": {"seconds": delay.seconds, "periods": delay.periods},
             "sensor": study.loop.sensor_text,
             "clock_tolerance": study.loop.clock_tolerance,
+            "execution_time": study.loop.execution_time,
         },
         "axes": {
             axis.name: {"from": axis.values[0], "to": axis.values[-1], "points": len(axis.values), "unit": axis.unit}
@@ -169,6 +170,8 @@ def _loop(study: Study) -> list[str]:
         rows.append(f"computing delay: {format_quantity(loop.computing_delay.seconds, study.time_unit)}")
     if loop.sensor is not None:
         rows.append(f"sensor: {loop.sensor_text}")
+    if not np.isnan(loop.execution_time):
+        rows.append(f"execution time: {format_quantity(loop.execution_time, 's')}")
     if loop.clock_tolerance:
         rows.append(f"clock tolerance: ± {100 * loop.clock_tolerance:g} %")
     return rows

@@ -10,7 +10,9 @@ from typing import Any, NamedTuple
 
 import xarray
 
-from explorer.errors import RunError
+from explorer.errors import OptionError, RunError
+from explorer.names import GAIN, PERIOD, SCALE, SWEEP, VERDICT
+from explorer.study.quantities import QuantityError, read_in_unit
 from explorer.sweeping.store import (
     DECISION_FILE,
     SWEEP_FILE,
@@ -26,6 +28,7 @@ from explorer.views.plain import as_json
 from explorer.views.style import save
 
 REGION_FILE, SLACK_FILE = "region.png", "slack.png"
+_DECIDED = {"answer", "feasible", "tolerance_scale", "slowest_period", "recommended", "nearest", "limits"}
 
 
 class Run(NamedTuple):
@@ -47,24 +50,31 @@ def write_answer(folder: Path, sweep: xarray.Dataset, limits: Mapping[str, str] 
 
 
 def draw(
-    folder: Path, show: str | None, tolerance_scale: float, design: Mapping[str, float], kind: str
+    folder: Path, show: str | None, tolerance_scale: float, place: Mapping[str, str], kind: str
 ) -> Path:
-    """Draw the region (show None) or one field of a run as it was last judged; returns the picture's path."""
+    """Draw the region (show None) or one field of a run as it was last judged; returns the picture's path.
+
+    place : further design variables and their values as written, "20 ms".
+    """
     run = read_run(folder)
+    design = {name: _in_axis_unit(run.verdict, name, value) for name, value in place.items()}
     if show is None:
         figure = region_map(run.verdict, run.decision, tolerance_scale, design)
     else:
         sweep = read_sweep(folder) if show == "share" else None
         figure = slack_map(run.verdict, show, sweep, tolerance_scale, design, run.decision)
-    words = [re.sub(r"[^A-Za-z0-9]+", "-", show or "region").strip("-").lower()]
+    words = [re.sub(r"\W+", "-", show or "region").strip("-").lower() or "requirement"]
     words += [f"scale-{tolerance_scale:g}"] if tolerance_scale != 1 else []
     words += [f"{name}-{value:g}" for name, value in design.items()]
     return save(figure, folder / f"{'-'.join(words)}.{kind}")
 
 
 def read_sweep(folder: Path) -> xarray.Dataset:
-    """The sweep of a run; RunError when there is none."""
-    return read_dataset(folder / SWEEP_FILE)
+    """The sweep of a run; RunError when there is none, or when it is none of explorer's."""
+    sweep = read_dataset(folder / SWEEP_FILE)
+    if not (SWEEP.keys() <= sweep.variables.keys() and "study" in sweep.attrs):
+        raise RunError(f"{folder / SWEEP_FILE}: not the sweep of a study. Run `explorer sweep STUDY --fresh`.")
+    return sweep
 
 
 def read_run(folder: Path) -> Run:
@@ -73,8 +83,22 @@ def read_run(folder: Path) -> Run:
     file = folder / DECISION_FILE
     try:
         decision = json.loads(file.read_text(encoding="utf-8"))
-    except (OSError, ValueError):
-        raise RunError(
-            f"{file}: missing or damaged. Run `explorer judge {folder}` to write it again."
-        ) from None
+    except (OSError, ValueError, RecursionError):
+        decision = None
+    again = f"Run `explorer judge {folder}` to write it again."
+    if not VERDICT.keys() <= verdict.variables.keys():
+        raise RunError(f"{folder / VERDICT_FILE}: not the verdict of a run. {again}")
+    if not (isinstance(decision, dict) and decision.keys() >= _DECIDED):
+        raise RunError(f"{file}: missing or damaged. {again}")
     return Run(verdict, decision)
+
+
+def _in_axis_unit(verdict: xarray.Dataset, name: str, value: str) -> float:
+    """A value of a further design variable in the unit of its axis; OptionError with the reason otherwise."""
+    others = [str(other) for other in verdict["least_slack"].dims if other not in (SCALE, PERIOD, GAIN)]
+    if name not in others:
+        raise OptionError(f"--at: no further design variable {name!r}; this run has: {', '.join(others) or 'none'}")
+    try:
+        return read_in_unit(value, verdict[name].attrs["units"])
+    except QuantityError as error:
+        raise OptionError(f"--at: {name}: {error}") from None
