@@ -9,7 +9,9 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from small_study import study_of
 
+import explorer
 from explorer.kernels.factors import (
     FLOOR,
     IN_Z,
@@ -26,6 +28,8 @@ from explorer.kernels.lanes import LANES, ArrayOperations
 from explorer.kernels.restart import solve_afresh
 from explorer.kernels.roots import poles, reductions_of
 from explorer.kernels.tracking import REDUCTIONS, gain_steps, tracker
+from explorer.loop import solving
+from explorer.sweeping import tiles
 
 ROUNDING = 4e-16  # two roundings
 
@@ -173,7 +177,7 @@ def polynomial_in_z(polynomial):
 
 
 @settings(deadline=None, max_examples=60)
-@given(st.integers(1, 16), st.integers(0, 2**31))
+@given(st.sampled_from([1, 2, 3, 4, 5, 8, 16]), st.integers(0, 2**31))
 def test_no_uncertified_answer_passes_as_known(degree, seed):
     generator = np.random.default_rng(seed)
     scale = 10.0 ** generator.uniform(-4, 0.3)
@@ -235,3 +239,32 @@ def test_a_fresh_solution_groups_conjugates_and_neighbours():
     solve_afresh(constant, np.zeros_like(constant), 0, 5, 1.0, 0, past, 0)
     made = np.array([np.ones(1), *product([row[:1] for row in past], 5)])[:, 0]
     assert made == pytest.approx(np.poly(roots).real, rel=1e-13, abs=1e-15)  # five factors' roundings
+
+
+LAGGING = {
+    "parameters": 'k = { nominal = 1.0, tolerance = "10 %" }\nlag = { from = 0.8, to = 1.3 }',
+    "transfer": "k/(s*(lag*s + 1))",
+    "gain": "{ from = 0.05, to = 20, points = 24 }",
+    "period": "{ from = 0.05, to = 2, points = 5 }",
+    "scenarios": "{ interior = 5, corners = true, seed = 1, tolerance_scales = [0, 1.0] }",
+}
+
+
+@pytest.mark.parametrize(
+    "parts",
+    [
+        {"compensator": "gain*(z - 0.9)/z"},
+        {"compensator": "gain*(1 + 0.4*(z - 1)/(period*z))", "loop": "computing_delay = 0.03"},
+        {"compensator": "(gain + gain**2)*(z - 0.9)/(z - 0.2/(1 + gain))"},
+    ],
+    ids=["one pole at the origin", "a fractional delay", "not affine in the gain"],
+)
+def test_a_tracked_sweep_equals_companion_eigenvalues(parts, monkeypatch):
+    study = study_of(**LAGGING | parts)
+    by_eigenvalues = explorer.sweep(study, jobs=1)
+    monkeypatch.setattr(tiles, "WORTH_TRACKING", 0)
+    monkeypatch.setattr(solving, "_FEW", 0)
+    by_tracking = explorer.sweep(study, jobs=1)
+    for name in ("worst_value", "nominal_value"):
+        np.testing.assert_allclose(by_tracking[name], by_eigenvalues[name], rtol=1e-9)  # what is promised
+    assert by_tracking.attrs["status_tally"] == by_eigenvalues.attrs["status_tally"]

@@ -1,7 +1,8 @@
 """Solving: characteristic polynomials from closing in, what measures need of the poles for sweeping out.
 
-Poles are tracked along the gains for LANES pairs of scenario and period at a time, in w = z - 1 and, where w does
-not resolve poles near z = 0 that matter, once more in z. What neither certifies goes one by one through the companion
+Where loops are many, poles are tracked along the gains for LANES pairs of scenario and period at a time, in w = z - 1
+and, where w does
+not resolve poles near z = 0 that matter, once more in z. All others go one by one through the companion
 eigenvalues; what fails there is unknown.
 """
 
@@ -22,6 +23,7 @@ Real = NDArray[np.float64]
 
 HIGHEST_TRACKED = 16
 _WORTH_A_SECOND_RUN = 0.01  # of a block's loops: companion eigenvalues cost hundreds of times a tracked loop
+_FEW = 5_000  # loops that companion eigenvalues solve while the tracking in z would still be compiled
 _LAPACK_AT_ONCE = 20_000  # polynomials, to bound memory
 
 
@@ -35,8 +37,12 @@ class Solved(NamedTuple):
     status: NDArray[np.int8]
 
 
-def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real) -> Solved:
-    """Reductions of all poles of a group's loops at every gain; steps : (G, 5) from kernels.tracking.gain_steps."""
+def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real, track: bool) -> Solved:
+    """Reductions of all poles of a group's loops at every gain.
+
+    steps : (G, 5) from kernels.tracking.gain_steps. track : whether the loops are many enough to be tracked, which
+    takes seconds of compiling for each degree on a new machine; without it all go through companion eigenvalues.
+    """
     degree, pairs = degree_of(sampled, compensator, group.delay), len(group.rows)
     blocks, gain = -(-pairs // LANES), steps[:, 0]
     reductions = np.empty((blocks, len(gain), REDUCTIONS, LANES))
@@ -46,13 +52,14 @@ def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real)
         return Solved(reductions, status)
     in_w = characteristic(sampled, compensator, group, variable=0)
     certificates = np.zeros((blocks, len(gain), LANES))  # none yet
-    if 0 < degree <= HIGHEST_TRACKED:
+    track = track and 0 < degree <= HIGHEST_TRACKED
+    if track:
         constant, slope = (_in_lanes(part, blocks) for part in in_w)
         tracker(degree)(constant, slope, steps, reductions, certificates)
     if (certificates == 1.0).all():
         return Solved(reductions, status)
     in_z = characteristic(sampled, compensator, group, variable=1)
-    if 0 < degree <= HIGHEST_TRACKED:
+    if track and (certificates != 1.0).sum() > _FEW:
         _track_in_z(degree, in_z, steps, reductions, certificates)
     _solve_rest(in_w, in_z, gain, reductions, status, certificates)
     return Solved(reductions, status)

@@ -28,6 +28,10 @@ Real = NDArray[np.float64]
 LOOPS_IN_TILE = 2_000_000  # a fraction of a second of work, and what a killed run can lose
 LOOPS_AT_ONCE = 200_000  # bounds memory, and the work between two looks at it by the interpreter
 
+# Tracking is compiled for each degree, a few seconds on a new machine: not worth it for fewer loops of one degree in
+# a tile, unless the sweep is long. Both depend on the study alone, so the numbers never depend on what is compiled.
+WORTH_TRACKING, MANY_LOOPS = 150_000, 10_000_000
+
 
 class Tile(NamedTuple):
     """number in the run; design : index of the combination of further variables; periods start..stop."""
@@ -67,11 +71,13 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile) -> TileResult:
     sampled = _sampled(study, scenarios.by_name(), period)
     reduction, steps = Reduction(study, scenarios, period), gain_steps(gain)
     pairs = max(LANES, LOOPS_AT_ONCE // len(gain) // LANES * LANES)
+    many = loops_in(study, len(scenarios.scale)) >= MANY_LOOPS
     for whole in groups_of(sampled):
+        track = many or len(whole.rows) * len(gain) >= WORTH_TRACKING
         for start in range(0, len(whole.rows), pairs):
             part = slice(start, start + pairs)
             group = Group(whole.delay, whole.rows[part], whole.columns[part])
-            solved = solve(sampled, compensator, group, steps)
+            solved = solve(sampled, compensator, group, steps, track)
             reduction.add(group, solved, sampled.period[group.rows, group.columns])
     return reduction.result()
 
