@@ -30,7 +30,7 @@ LOOPS_AT_ONCE = 200_000  # bounds memory, and the work between two looks at it b
 
 # Tracking is compiled for each degree, a few seconds on a new machine: not worth it for fewer loops of one degree in
 # a tile, unless the sweep is long. Both depend on the study alone, so the numbers never depend on what is compiled.
-WORTH_TRACKING, MANY_LOOPS = 150_000, 10_000_000
+WORTH_TRACKING, MANY_LOOPS = 500_000, 10_000_000
 
 
 class Tile(NamedTuple):
