@@ -214,13 +214,14 @@ def described(error: Exception) -> str:
 @contextlib.contextmanager
 def progress_line(title: str) -> Iterator[Callable[[int, int], None]]:
     """A progress bar with the time left on stderr; silent when stderr is no terminal."""
+    from rich import progress as parts
     from rich.console import Console
     from rich.markup import escape
-    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn, TimeRemainingColumn
 
     console = Console(stderr=True)
-    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed}/{task.total} tiles"),
-               TimeElapsedColumn(), TextColumn("left"), TimeRemainingColumn())  # fmt: skip
-    with Progress(*columns, console=console, disable=not sys.stderr.isatty(), transient=True) as progress:
+    columns = (parts.TextColumn("{task.description}"), parts.BarColumn(), parts.MofNCompleteColumn(),
+               parts.TextColumn("tiles"), parts.TimeElapsedColumn(), parts.TextColumn("left"),
+               parts.TimeRemainingColumn())  # fmt: skip
+    with parts.Progress(*columns, console=console, disable=not sys.stderr.isatty(), transient=True) as progress:
         task = progress.add_task(escape(title[:40]), total=None)
         yield lambda done, total: progress.update(task, completed=done, total=total)

@@ -8,8 +8,8 @@ import numpy as np
 import xarray as xr
 
 import explorer
-from explorer.kernels.roots import Poles, poles
-from explorer.loop.closing import characteristic, groups_of
+from explorer.kernels.roots import HIGHEST_DEGREE, TOO_LONG, Poles, poles
+from explorer.loop.closing import characteristic, degree_of, groups_of
 from explorer.study.model import Study
 
 ONE_PLANT = "{ interior = 0, corners = false, seed = 1, tolerance_scales = [1.0] }"
@@ -69,8 +69,10 @@ class Found(NamedTuple):
 def closed_loop_poles(sampled, compensator, gain):
     """All poles by companion eigenvalues, one group per whole-sample delay."""
     for group in groups_of(sampled):
-        polynomials = []
-        for variable in (0, 1):
-            constant, slope = characteristic(sampled, compensator, group, variable)
-            polynomials.append(constant + gain[None, :, None] * slope)
-        yield Found(group.rows, group.columns, poles(*polynomials))
+        if degree_of(sampled, compensator, group.delay) > HIGHEST_DEGREE:
+            shape = (len(group.rows), len(gain))
+            found = Poles(np.full((*shape, 1), np.nan + 0j), np.full(shape, TOO_LONG, np.int8))
+        else:
+            both = (characteristic(sampled, compensator, group, variable) for variable in (0, 1))
+            found = poles(*(constant + gain[None, :, None] * slope for constant, slope in both))
+        yield Found(group.rows, group.columns, found)

@@ -15,6 +15,7 @@ from explorer.study.quantities import Quantity, QuantityError, read_in_unit, rea
 from explorer.study.schema import Section, shown, validated
 
 SECOND = read_quantity("1 s").dimension
+LARGEST = 1e100  # of any quantity, so that products of a few stay inside a double
 MOST_FAULTS = 25  # finding a line parses the study some times over
 
 
@@ -61,7 +62,7 @@ class Collector:
         if quantity.periods:
             self.fault(path, f"found {shown(value)}", "only computing_delay may be a share of the period")
             return None
-        return quantity
+        return quantity if self._within_reach(quantity.value, value, path) else None
 
     def time(self, value: str | int | float, path: Path, unit: str = "s") -> float | None:
         """A time that is not negative, in `unit` ("s" or "sample"); None with a fault."""
@@ -79,7 +80,7 @@ class Collector:
         if number < lowest:
             self.fault(path, f"found {shown(value)}", f"allowed: {lowest:g} or more")
             return None
-        return number
+        return number if self._within_reach(number, value, path) else None
 
     def expression(self, value: str | int | float, path: Path, known: Iterable[str]) -> Node | None:
         """An expression over known names, or None with a fault that tells the column."""
@@ -103,6 +104,11 @@ class Collector:
     def expression_fault(self, value: object, path: Path, error: ExpressionError) -> None:
         """A fault of an expression whose column and reason are known."""
         self.fault(path, f"found {shown(value)}", f"{str(error).rstrip(';')}")
+
+    def _within_reach(self, number: float, value: object, path: Path) -> bool:
+        if abs(number) > LARGEST:
+            self.fault(path, f"found {shown(value)}", f"allowed: sizes up to {LARGEST:g}")
+        return abs(number) <= LARGEST
 
     def _quantity_fault(self, value: object, path: Path, error: QuantityError) -> None:
         self.fault(path, f"found {shown(value)}: {error.found}", error.allowed, error.mend)

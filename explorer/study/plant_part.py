@@ -255,9 +255,14 @@ def _dead_time(
         return None
     samples = _samples(value) if sampled_at else None
     time = collector.time(value, path, time_unit) if samples is None else samples * sampled_at
-    if time is not None and sampled_at and abs(time / sampled_at - round(time / sampled_at)) > 1e-9:
+    if time is not None and sampled_at and not whole(time / sampled_at):
         collector.fault(path, f"found {shown(value)}", "allowed: whole samples with a plant given in z")
     return Number(time, 1) if time else None
+
+
+def whole(samples: float) -> bool:
+    """Whether a delay is a whole number of samples but for rounding."""
+    return abs(samples) < 1e9 and abs(samples - round(samples)) <= 1e-9 * max(1.0, abs(samples))
 
 
 def _samples(value: str | int | float) -> float | None:
@@ -306,7 +311,7 @@ def parameter_bounds(
         low, high = parameter.reach(scale)
         if sampled_at and parameter.name in times:
             samples = [value / sampled_at for value in (*parameter.variants, parameter.nominal)]
-            if parameter.varies or any(abs(value - round(value)) > 1e-9 for value in samples):
+            if parameter.varies or not all(whole(value) for value in samples):
                 collector.fault(
                     ("plant", "parameters", parameter.name), "found a dead time between samples",
                     "allowed: whole samples with a plant given in z", "Give it as exact, or by any_of.",

@@ -22,7 +22,7 @@ from explorer.study.expressions import ExpressionError, Name, depends_on, names_
 from explorer.study.locate import Path
 from explorer.study.loop_part import check_units, read_loop
 from explorer.study.model import Axis, Loop, Measure, Parameter, Plant, Study
-from explorer.study.plant_part import parameter_bounds, read_parameters, read_plant
+from explorer.study.plant_part import parameter_bounds, read_parameters, read_plant, whole
 from explorer.study.quantities import QuantityError, read_quantity
 from explorer.study.requirement_part import read_requirements
 from explorer.study.schema import LoopSection, PlantSection, StudySection, keys_of, respelt, shown
@@ -151,7 +151,7 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
         times = {name.name for name in names_in(plant.dead_time)} if plant.dead_time and known_time else set()
         parameter_bounds(collector, parameters, max(scenarios.tolerance_scales), times, period)
         check_size(collector, axes, parameters, scenarios)
-    if plant and loop:
+    if plant or loop:
         try_values(collector, plant, loop, parameters, axes, scenarios.tolerance_scales if scenarios else (1.0,))
     if not (top and plant and loop and scenarios and "gain" in axes and "period" in axes):
         return None
@@ -215,11 +215,9 @@ def _check_together(collector: Collector, plant: Plant, loop: Loop, axes: dict[s
             ("loop", "conversion"), f"exact at {loop.exact_at / (2 * np.pi):g} {unit}",
             f"allowed: below half the sampling rate at the longest period, {0.5 / period[-1]:g} {unit}",
         )  # fmt: skip
-    if plant.variable == "z":
-        shares = loop.computing_delay.seconds / period[0]
-        if abs(shares - round(shares)) > 1e-9:
-            collector.fault(("loop", "computing_delay"), f"found {loop.computing_delay.seconds:g} s",
-                            "allowed: a whole number of periods with a plant given in z")  # fmt: skip
+    if plant.variable == "z" and not whole(loop.computing_delay.seconds / period[0]):
+        collector.fault(("loop", "computing_delay"), f"found {loop.computing_delay.seconds:g} s",
+                        "allowed: a whole number of periods with a plant given in z")  # fmt: skip
 
 
 def _note_unused(collector: Collector, plant: Plant, loop: Loop, parameters: dict[str, Parameter]) -> None:

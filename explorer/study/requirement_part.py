@@ -13,6 +13,7 @@ from explorer.study.locate import Path
 from explorer.study.model import Measure, Requirement
 from explorer.study.schema import RequirementSection, shown
 
+_PICTURES = ("slack", "binding", "share")  # what a map shows besides requirements
 _NEVER_NEGATIVE = ("s", "sample", "rad/s", "rad/sample", "%")
 _SAMPLES = re.compile(r"\s*(\S+)\s+samples?\s*")
 
@@ -51,6 +52,9 @@ def _requirement(
     if measure is None:
         return None
     name = section.name if section.name is not None else measure.name
+    if name in _PICTURES:
+        collector.fault((*path, "name"), f"the name {shown(name)} is taken",
+                        f"{', '.join(_PICTURES)} name pictures already", "Choose another name.")  # fmt: skip
     if section.band is not None and measure.band is None:
         collector.fault(
             (*path, "band"), f"found with {measure.name}", "allowed: only with a settling time", "Remove it."

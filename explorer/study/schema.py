@@ -207,15 +207,25 @@ def keys_of(model: type[BaseModel]) -> list[str]:
 
 
 def respelt(table: Mapping[str, Any], known: Iterable[str]) -> dict[str, Any]:
-    """The table with unknown keys renamed to the known ones they are near to, where those are not given."""
-    absent = [name for name in known if name not in table]
+    """The table with unknown keys renamed to the known ones they are near to, where those are not given.
+
+    A misspelt header of a table that stands under a right one too, [plnat] and [plant.parameters], joins it.
+    """
+    names = list(known)
     result: dict[str, Any] = {}
     for key, value in table.items():
-        near = None if key in known else nearest(key, absent)
-        if near is not None:
-            absent.remove(near)
-        result[near or key] = value
+        free = (name for name in names if _joined(result.get(name, table.get(name)), value) is not None)
+        place = key if key in names else nearest(key, free) or key
+        result[place] = _joined(result.get(place), value)
     return result
+
+
+def _joined(one: Any, other: Any) -> Any:
+    """What one key holds when both are given: tables without common keys together; None where that cannot be."""
+    if one is None or other is None:
+        return other if one is None else one
+    together = isinstance(one, dict) and isinstance(other, dict) and not one.keys() & other.keys()
+    return {**one, **other} if together else None
 
 
 def _described(item: dict[str, Any], known: list[str]) -> Found:

@@ -10,7 +10,7 @@ import math
 
 import numpy as np
 
-from explorer.study.collect import Collector
+from explorer.study.collect import LARGEST, Collector
 from explorer.study.expressions import ExpressionError, Node, names_in
 from explorer.study.locate import Path
 from explorer.study.model import Axis, Loop, Parameter, Plant
@@ -24,19 +24,21 @@ MOST_COMBINATIONS = 5000
 
 def try_values(
     collector: Collector,
-    plant: Plant,
-    loop: Loop,
+    plant: Plant | None,
+    loop: Loop | None,
     parameters: dict[str, Parameter],
     axes: dict[str, Axis],
     scales: tuple[float, ...],
 ) -> None:
     """Faults of an expression that has no value, answers before it is asked, is of too high an order, or is 0."""
     box = {one.name: _choices(one, scales) for one in parameters.values()}
-    if plant.transfer is not None:
+    if plant and plant.transfer is not None:
         _try(collector, plant.transfer, plant.text, ("plant", "transfer"), plant.variable, box)
-    for key, rows in (plant.states or {}).items():
+    for key, rows in (plant.states or {}).items() if plant else ():
         for node in (node for row in rows for node in row):
             _value(collector, node, f"an entry of {key}", ("plant", "states", key), "", box)
+    if not loop:
+        return
     if loop.sensor is not None:
         _try(collector, loop.sensor, loop.sensor_text, ("loop", "sensor"), "s", box)
     nominal = {one.name: np.array([one.nominal]) for one in parameters.values()}
@@ -66,8 +68,8 @@ def _try(collector: Collector, node: Node, text: str, path: Path, variable: str,
     if value is None:
         return
     above, below = value.degrees()
-    if max(above, below) > HIGHEST_DEGREE:
-        collector.fault(path, f"of degree {max(above, below)} in {variable}", f"allowed: up to {HIGHEST_DEGREE}")
+    if below > HIGHEST_DEGREE:
+        collector.fault(path, f"the denominator is of degree {below}", f"allowed: up to {HIGHEST_DEGREE}")
     elif not value.numerator().any():
         collector.fault(path, f"found {shown(text)}, which is 0", "allowed: a transfer that lets something through")
     elif any((factor[..., 0] == 0).all(axis=0).any() for factor, power in value.factors if power < 0):
@@ -76,7 +78,7 @@ def _try(collector: Collector, node: Node, text: str, path: Path, variable: str,
             "allowed: one order over the whole tolerance box and all axes",
         )  # fmt: skip
     elif above > below and not (path == ("loop", "compensator") and variable == "s"):
-        early = "it would need samples that are not taken yet" if variable == "z" else "nothing answers at once to a jump"
+        early = "it would need samples that are not taken yet" if variable == "z" else "nothing real is so quick"
         collector.fault(
             path, f"the numerator is of degree {above} in {variable}, the denominator of {below}: {early}",
             "allowed: up to the denominator's degree", "Add the lag or the delay that it has in truth.",
@@ -91,15 +93,26 @@ def _value(
     faulty = {part for fault in collector.faults for part in fault.key.split(".")}
     if not needed <= choices.keys() or needed & faulty:
         return None
-    symbolic = {"gain": np.array([[0.0], [1.0]])} if "gain" in needed else {}
     try:
-        try:
-            free = _crossed({name: choices[name] for name in needed if name != "gain"})
-            value = evaluate(node, variable, [1.0, 0.0], free | symbolic)
-            value.numerator()  # where the gain may still meet itself
-            return value
-        except NotAffineError:
-            return evaluate(node, variable, [1.0, 0.0], _crossed({name: choices[name] for name in needed}))
+        value, sizes = _evaluated(node, variable, {name: choices[name] for name in needed})
     except ExpressionError as error:
         collector.expression_fault(text, path, error)
         return None
+    if not np.max(sizes) < LARGEST**2:
+        collector.fault(path, f"found {shown(text)}", f"allowed: coefficients up to {LARGEST**2:g}")
+        return None
+    return value
+
+
+@np.errstate(all="ignore")  # what leaves the numbers shows in the sizes
+def _evaluated(node: Node, variable: str, choices: Names) -> tuple[Rational, list[Array]]:
+    """The value with the gain as [[0], [1]], or gain by gain where that meets itself; and sizes of its coefficients."""
+    free = {name: values for name, values in choices.items() if name != "gain"}
+    symbolic = {"gain": np.array([[0.0], [1.0]])} if "gain" in choices else {}
+    try:
+        value = evaluate(node, variable, [1.0, 0.0], _crossed(free) | symbolic)
+        numerator = value.numerator()
+    except NotAffineError:
+        value = evaluate(node, variable, [1.0, 0.0], _crossed(choices))
+        numerator = value.numerator()
+    return value, [np.abs(part).max() for part in (numerator, *(factor for factor, _ in value.factors))]

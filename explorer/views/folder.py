@@ -63,7 +63,8 @@ def draw(
     else:
         sweep = read_sweep(folder) if show == "share" else None
         figure = slack_map(run.verdict, show, sweep, tolerance_scale, design, run.decision)
-    words = [re.sub(r"\W+", "-", show or "region").strip("-").lower() or "requirement"]
+    named = "least slack" if show == "slack" else show or "region"  # slack.png is the sheet of all requirements
+    words = [re.sub(r"\W+", "-", named).strip("-").lower() or "requirement"]
     words += [f"scale-{tolerance_scale:g}"] if tolerance_scale != 1 else []
     words += [f"{name}-{value:g}" for name, value in design.items()]
     return save(figure, folder / f"{'-'.join(words)}.{kind}")
