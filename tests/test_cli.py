@@ -84,8 +84,8 @@ def test_a_sweep_answers_and_writes_its_folder(swept):
 def test_check_says_what_was_understood(swept):
     folder, _ = swept
     said = explore("check", folder / "study.toml").stdout
-    for words in (ODD_TITLE.replace("\\\\", "\\"), ODD_NAME, "lead: 10 ms to 20 ms, 2 points", "30 closed loops",
-                  "settling time by poles at most 15 s", "nominal poles 0 1/s", "column 6 adds [1/s] and [1]"):  # fmt: skip
+    for words in (ODD_NAME, "lead: 10 ms to 20 ms, 2 points, values", "30 closed loops", "nominal poles 0 1/s",
+                  "settling time by poles at most 15 s", "plant.transfer: column 9 adds [1/s] and [1]"):  # fmt: skip
         assert words in said
     assert said.splitlines()[0] == ODD_TITLE.replace("\\\\", "\\")
 
@@ -102,14 +102,14 @@ def test_json_is_one_document_and_nothing_else(swept, run):
 
 def test_other_limits_are_judged_without_sweeping(run):
     before = (run / "sweep.nc").read_bytes()
-    said = explore("judge", run, "--limit", f"{ODD_NAME}=0.999", "--strict")
+    said = explore("judge", run, "--limit", f"{ODD_NAME}=1.5", "--strict")
     assert said.exit_code == 1
     assert "Nowhere on the swept axes" in said.stdout
     assert (run / "sweep.nc").read_bytes() == before
     decided = explore("decide", run, "--strict")
     assert decided.exit_code == 1
     # an answer under other limits than the study's must not pass for the study's
-    assert f"Limits: {ODD_NAME}: at least 0.999; settling time: at most 15 s." in decided.stdout
+    assert f"Limits: {ODD_NAME}: at least 1.5; settling time: at most 15 s." in decided.stdout
     assert not json.loads(explore("decide", run, "--json").stdout)["feasible"]
 
 
@@ -138,8 +138,10 @@ BAD_OPTIONS = [
     (("judge", "RUN", "--limit", "settling time=nan"), "one number"),
     (("judge", "RUN", "--limit", "settling time=1", "--limit", "settling time=2"), "stands twice"),
     (("map", "RUN", "--show", "nosuch"), "there are: slack, binding, share"),
-    (("map", "RUN", "--tolerance-scale", "3"), "there are: 0, 1"), (("map", "RUN", "--tolerance-scale", "nan"), "there are"),
-    (("map", "RUN", "--tolerance-scale", "x"), "not a valid float"), (("map", "RUN", "--format", "bmp"), "'png', 'svg'"),
+    (("map", "RUN", "--tolerance-scale", "3"), "there are: 0, 1"),
+    (("map", "RUN", "--tolerance-scale", "nan"), "there are: 0, 1"),
+    (("map", "RUN", "--tolerance-scale", "x"), "not a valid float"),
+    (("map", "RUN", "--format", "bmp"), "'png', 'svg'"),
     (("map", "RUN", "--at", "lead"), "NAME=VALUE"), (("map", "RUN", "--at", "lead=15 ms"), "there are: 10 ms, 20 ms"),
     (("map", "RUN", "--at", "lead=10 V"), "a quantity in s"), (("map", "RUN", "--at", "gain=1"), "this run has: lead"),
     (("measures", "x"), "unexpected extra argument"),
@@ -154,9 +156,11 @@ def test_a_bad_word_is_refused_with_what_is_allowed(swept, tmp_path, words, phra
 
 
 def test_a_study_with_eight_faults_lists_them_and_writes_nothing(tmp_path, monkeypatch):
-    slips = [('"Camera carriage, position loop"', "5"), ('"12 %"', '"12 V"'), ("lead*(z", "laed*(z"), ('"0.5 %"', '"60 %"'),
-             ("seed = 7", "seed = 1.5"), ('"damping ratio"', '"dampnig ratio"'), ('"120 ms"', '"120 V"'),
-             ('= "transport"', '= "transprot"')]  # fmt: skip
+    slips = [
+        ('"Camera carriage, position loop"', "5"), ('"12 %"', '"12 V"'), ("lead*(z", "laed*(z"),
+        ('"0.5 %"', '"60 %"'), ("seed = 7", "seed = 1.5"), ('"damping ratio"', '"dampnig ratio"'),
+        ('"120 ms"', '"120 V"'), ('= "transport"', '= "transprot"'),
+    ]  # fmt: skip
     monkeypatch.chdir(tmp_path)
     file = tmp_path / "study.toml"
     file.write_text(changed(*slips), encoding="utf-8")
@@ -185,9 +189,9 @@ def test_what_nobody_foresaw_ends_with_three_and_a_message(tmp_path, monkeypatch
 
 
 def test_a_terminal_without_all_letters_shows_the_rest(run):
-    said = explore("decide", run, charset="latin-1")
-    assert said.exit_code == 0
-    assert "?settling time?" in said.stdout or f"?{ODD_NAME}?" in said.stdout
+    said, whole = explore("decide", run, charset="latin-1").stdout, explore("decide", run).stdout
+    assert "“" in whole
+    assert said == whole.replace("“", "?").replace("”", "?")
 
 
 DAMAGED = ["", "{", "[1]", "{}", '{"answer": "yes", "feasible": true}', "[" * 9000, "\0\1\2"]
@@ -233,7 +237,7 @@ main(sys.argv[1:])
 
 
 def test_an_interrupted_sweep_goes_on_to_the_same_numbers(tmp_path, monkeypatch):
-    slow = changed(("interior = 96", "interior = 1"), ("points = 24", "points = 4"), ("points = 20", "points = 150"))
+    slow = changed(("interior = 96", "interior = 1"), ("points = 24", "points = 4"), ("points = 20", "points = 40"))
     (tmp_path / "study.toml").write_text(slow, encoding="utf-8")
     words = ["sweep", str(tmp_path / "study.toml"), "--out", str(tmp_path / "run"), "--jobs", "1"]
     process = subprocess.Popen([sys.executable, "-c", DRIVER, *words], stderr=subprocess.PIPE, text=True)
@@ -245,7 +249,7 @@ def test_an_interrupted_sweep_goes_on_to_the_same_numbers(tmp_path, monkeypatch)
     assert process.returncode == 3
     assert said.strip() == "Interrupted. What was finished stays; the same command goes on from there."
     stored = list(tmp_path.glob("run/tiles-*/*.npz"))
-    assert 0 < len(stored) < 300
+    assert 0 < len(stored) < 80
     assert not list(tmp_path.glob("run/**/*.part"))
     monkeypatch.setattr(tiles, "LOOPS_IN_TILE", 40)
     monkeypatch.setattr(running, "compute", only_others(running.compute, {int(path.stem[5:]) for path in stored}))
@@ -267,10 +271,16 @@ def only_others(compute, finished):
     return checked
 
 
+LIGHT = """
+import sys
+from explorer.cli import main
+main(["--help"], standalone_mode=False)
+print(sorted({"numpy", "numba", "xarray", "matplotlib", "rich", "pydantic"} & sys.modules.keys()))
+"""
+
+
 def test_help_needs_nothing_heavy_and_kernels_no_writable_cache(tmp_path):
-    light = "import sys; from explorer.cli import main; main(['--help'], standalone_mode=False); " \
-            "print(sorted({'numpy', 'numba', 'xarray', 'matplotlib', 'rich', 'pydantic'} & sys.modules.keys()))"  # fmt: skip
-    done = subprocess.run([sys.executable, "-c", light], capture_output=True, text=True, check=True)
+    done = subprocess.run([sys.executable, "-c", LIGHT], capture_output=True, text=True, check=True)
     assert "Exit status: 0 done" in done.stdout
     assert done.stdout.splitlines()[-1] == "[]"
     (tmp_path / "study.toml").write_text(CARRIAGE, encoding="utf-8")
