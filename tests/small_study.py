@@ -29,6 +29,36 @@ at_most = 5
 """
 
 
+# A lag with two ranges, a dead time, variants and an inexact clock; then over further periods and a design variable
+LAG = {
+    "transfer": "load*strength/(lag*s + 1)",
+    "plant": 'dead_time = "transport"',
+    "parameters": 'strength = { nominal = 1.5, tolerance = "20 %" }\nlag = { from = 0.3, to = 0.5 }\n'
+    'transport = { nominal = 0.02, tolerance = "50 %" }\nload = { any_of = [1.0, 1.3], nominal = 1.0 }',
+    "loop": 'clock_tolerance = "1 %"',
+    "gain": "{ values = [0.4, 1.2, 2.9, 4.0] }",
+    "period": "{ values = [0.11, 0.2] }",
+    "scenarios": "{ interior = 6, corners = true, seed = 3, tolerance_scales = [0, 0.5, 1.0] }",
+    "requirements": """
+[[requirements]]
+measure = "spectral radius"
+at_most = 0.75
+[[requirements]]
+measure = "damping ratio"
+at_least = 0.3
+[[requirements]]
+name = "quick"
+measure = "settling time"
+basis = "poles"
+at_most = "9 samples"
+""",
+}
+SPREAD = LAG | {
+    "period": '{ from = 0.11, to = 0.4, points = 9, spacing = "linear" }',
+    "compensator": "gain*(1 + lead*(z - 1)/(period*z))", "axes": "lead = { values = [0.0, 0.02] }",
+}  # fmt: skip
+
+
 def text_of(
     transfer: str = "1/(s*(s + 1))",
     plant: str = "",
@@ -56,6 +86,12 @@ def study_of(**parts: Any) -> Study:
 def swept(**parts: Any) -> xr.Dataset:
     """The sweep of text_of(**parts), one worker."""
     return explorer.sweep(study_of(**parts), jobs=1)
+
+
+def same(left, right):
+    """Bit for bit, apart from the time of writing."""
+    assert {**left.attrs, "created": ""} == {**right.attrs, "created": ""}
+    return left.identical(right.assign_attrs(left.attrs))
 
 
 class Found(NamedTuple):

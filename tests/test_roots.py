@@ -187,6 +187,18 @@ def test_eigenvalues_given_up_by_the_library_are_unknown(monkeypatch):
     assert (answer.status == SOLVED).tolist() == [True, False, True]
 
 
+def test_blocks_of_polynomials_do_not_matter(monkeypatch):
+    in_w, in_z = (np.repeat(one, 7, axis=0) for one in both_readings([0.9, 0.5, 0.2, 0.7]))
+    in_w[:, 2] += 1e-3 * np.arange(7)
+    in_z[:, 2] += 1e-3 * np.arange(7)
+    in_w[3, 0] = 0.0
+    whole = poles(in_w, in_z)
+    monkeypatch.setattr(kernel, "_ENTRIES", 60)  # two at a time
+    parts = poles(in_w, in_z)
+    assert (parts.status == whole.status).all()
+    np.testing.assert_array_equal(parts.log_z, whole.log_z)
+
+
 def test_poles_at_exactly_zero():
     answer = poles(np.polymul([1, 1], np.polymul([1, 1], [1, 0.3]))[None], np.array([[1.0, -0.7, 0.0, 0.0]]))
     log_z = answer.log_z[0][np.argsort(answer.log_z[0].real)]
@@ -274,6 +286,18 @@ def test_nasty_loops(name):
         assert error < allowed, gain
         assert radius[index] == pytest.approx(np.exp(exact.real.max()), rel=allowed), gain
         assert radius[index] >= 1 or exact.real.max() < 0, gain  # what is marginal never reads stable
+
+
+def test_small_gains_at_fast_sampling_are_solved():
+    # A slow integral part far below the plant's poles, those far below the poles of the dead time: seven decades
+    parts = {
+        "transfer": "1/((s^2/3.4 + 0.11*s + 1)*(s^2/0.03 + 17*s + 1))", "plant": "dead_time = 5.6e-7",
+        "compensator": "gain*(1 + period/(z - 1))", "period": "{ values = [1.346e-7] }",
+        "gain": "{ from = 1e-6, to = 1e3, points = 40 }",
+    }  # fmt: skip
+    (group,) = closed_loop_poles(*sampled_loop(study_of(**parts)), np.geomspace(1e-6, 1e3, 40))
+    assert (group.found.status == SOLVED).all()
+    assert swept(**parts).attrs["unknown_loops"] == 0
 
 
 @mp.workdps(50)

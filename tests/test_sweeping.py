@@ -1,49 +1,22 @@
-"""Sweeping: tiles, reduction over scenarios, labels, files and resumed runs of explorer.sweeping.
+"""Sweeping: tiles, reduction over scenarios and labels of explorer.sweeping.
 
-Neighbours: small_study writes studies; test_scenarios checks the table of plants.
+Neighbours: small_study writes studies; test_scenarios checks the table of plants, test_store the files.
 """
 
 from __future__ import annotations
 
-import gc
-
 import numpy as np
 import pytest
-import xarray as xr
-from small_study import study_of, swept, text_of
+from small_study import LAG, SPREAD, same, study_of, swept
 
 import explorer
-from explorer.errors import OptionError, RunError
-from explorer.sweeping import running, tiles
+from explorer.kernels.worst import keep_worst
+from explorer.sweeping import tiles
 from explorer.sweeping.dataset import Grid
 from explorer.sweeping.estimate import estimate
 from explorer.sweeping.scenarios import scenarios_of
-from explorer.sweeping.store import SWEEP_FILE, TileStore, owned
 from explorer.sweeping.tiles import Tile, compute, tiles_of
 
-LAG = {
-    "transfer": "load*strength/(lag*s + 1)",
-    "plant": 'dead_time = "transport"',
-    "parameters": 'strength = { nominal = 1.5, tolerance = "20 %" }\nlag = { from = 0.3, to = 0.5 }\n'
-    'transport = { nominal = 0.02, tolerance = "50 %" }\nload = { any_of = [1.0, 1.3], nominal = 1.0 }',
-    "loop": 'clock_tolerance = "1 %"',
-    "gain": "{ values = [0.4, 1.2, 2.9, 4.0] }",
-    "period": "{ values = [0.11, 0.2] }",
-    "scenarios": "{ interior = 6, corners = true, seed = 3, tolerance_scales = [0, 0.5, 1.0] }",
-    "requirements": """
-[[requirements]]
-measure = "spectral radius"
-at_most = 0.75
-[[requirements]]
-measure = "damping ratio"
-at_least = 0.3
-[[requirements]]
-name = "quick"
-measure = "settling time"
-basis = "poles"
-at_most = "9 samples"
-""",
-}
 # 52 samples of dead time at 0.1 s nominally, 76 at half the tolerance, 100 at all of it: too many to solve
 TOO_LONG = {
     "plant": LAG["plant"], "parameters": "transport = { from = 0.5, to = 10.0 }", "transfer": "1/(s + 1)",
@@ -128,10 +101,28 @@ def test_loop_without_poles_and_without_answer_is_unknown():
     assert explorer.judge(dataset)["feasible"].sel(gain=0.2).all()
 
 
-def same(left, right):
-    """Bit for bit, apart from the time of writing."""
-    assert {**left.attrs, "created": ""} == {**right.attrs, "created": ""}
-    return left.identical(right.assign_attrs(left.attrs))
+def test_what_is_unknown_in_a_narrow_box_stays_so_in_a_wide_one():
+    # as above, but only the nominal k has no answer: every plant of the wider scale is solved
+    dataset = swept(
+        transfer="k", parameters='k = { nominal = 2.0, tolerance = "10 %" }', gain="{ values = [-0.5, 0.2] }",
+        scenarios="{ interior = 0, corners = true, seed = 1, tolerance_scales = [0, 0.5, 1.0] }",
+    )  # fmt: skip
+    assert dataset.attrs["unknown_loops"] == 2  # at two periods
+    assert np.isnan(dataset["worst_value"].sel(gain=-0.5)).all()
+    assert (dataset["worst_scenario"].sel(gain=-0.5) == 0).all()
+    assert dataset["share_met"].sel(gain=-0.5).values == pytest.approx(np.array([[0.0] * 2, [2 / 3] * 2, [4 / 5] * 2]))
+
+
+@pytest.mark.parametrize("turned", [False, True])
+def test_equal_values_and_unknown_ones_are_put_down_to_the_first_scenario(turned):
+    # one gain per case: a tie, two unknown, an unknown after a number; the groups in either order
+    values = {0: [3.0, 1.0, 9.0], 1: [5.0, np.nan, 1.0], 2: [5.0, np.nan, np.nan]}
+    worst, place = np.full((1, 1, 3), -np.inf), np.full((1, 1, 3), -1, np.int32)
+    for scenario in sorted(values, reverse=turned):
+        lanes = np.array(values[scenario]).reshape(1, 3, 1)
+        keep_worst(lanes, 1, np.array([scenario]), np.array([0]), np.array([0]), 1.0, worst, place)
+    assert place.tolist() == [[[1, 1, 2]]]
+    np.testing.assert_array_equal(worst, [[[5.0, np.nan, np.nan]]])
 
 
 @pytest.fixture
@@ -139,12 +130,6 @@ def many_tiles(monkeypatch):
     """A cut so fine that these small sweeps take several tiles and several blocks of scenarios."""
     monkeypatch.setattr(tiles, "LOOPS_IN_TILE", 400)
     monkeypatch.setattr(tiles, "LOOPS_AT_ONCE", 30)
-
-
-SPREAD = LAG | {
-    "period": '{ from = 0.11, to = 0.4, points = 9, spacing = "linear" }',
-    "compensator": "gain*(1 + lead*(z - 1)/(period*z))", "axes": "lead = { values = [0.0, 0.02] }",
-}  # fmt: skip
 
 
 def test_any_number_of_workers_gives_the_same_bits(many_tiles):
@@ -206,131 +191,6 @@ def test_design_variables_are_axes_of_their_own():
             found = dataset.sel(lead=lead, extra=extra)
             for name in ("worst_value", "nominal_value", "share_met"):
                 assert found[name].values == pytest.approx(alone[name].values, rel=1e-12), name
-
-
-# Files ----------------------------------------------------------------------------------------------------------
-
-
-def interrupted(study, folder, after, jobs=1):
-    """A run stopped by the user after some tiles."""
-
-    def stop(done, total):
-        if done == after:
-            raise KeyboardInterrupt
-
-    with pytest.raises(KeyboardInterrupt):
-        explorer.sweep(study, out=folder, jobs=jobs, progress=stop)
-
-
-def counted(monkeypatch):
-    """The numbers of the tiles computed from here on."""
-    numbers: list[int] = []
-
-    def compute_and_count(study, scenarios, tile):
-        numbers.append(tile.number)
-        return compute(study, scenarios, tile)
-
-    monkeypatch.setattr(running, "compute", compute_and_count)
-    return numbers
-
-
-def test_a_stopped_run_goes_on_and_gives_the_same_bits(many_tiles, monkeypatch, tmp_path):
-    study = study_of(**SPREAD)
-    whole, total = explorer.sweep(study, jobs=1), len(tiles_of(study, len(scenarios_of(study).scale)))
-    interrupted(study, tmp_path, after=5)
-    assert not (tmp_path / SWEEP_FILE).exists()
-    stored = sorted(tmp_path.glob("tiles-*/tile-*.npz"))
-    assert len(stored) == 5
-    stored[1].unlink()
-    stored[3].write_bytes(stored[3].read_bytes()[:-100])
-    numbers, reports = counted(monkeypatch), []
-    resumed = explorer.sweep(study, out=tmp_path, jobs=1, progress=lambda *report: reports.append(report))
-    assert numbers == [1, 3, *range(5, total)]
-    assert reports == [(done, total) for done in range(4, total + 1)]
-    assert same(whole, resumed)
-    assert not list(tmp_path.glob("tiles-*"))
-    # finished: read again, not computed again, unless asked to
-    numbers.clear()
-    assert same(whole, explorer.sweep(study, out=tmp_path, jobs=1))
-    assert numbers == []
-    explorer.sweep(study, out=tmp_path, jobs=1, fresh=True)
-    assert len(numbers) == total
-
-
-def test_a_stopped_run_of_several_workers_goes_on(many_tiles, tmp_path):
-    study = study_of(**SPREAD)
-    interrupted(study, tmp_path, after=5, jobs=2)
-    gc.collect()  # the workers' generator ends here at the latest, and without a word
-    assert same(explorer.sweep(study, jobs=1), explorer.sweep(study, out=tmp_path, jobs=2))
-
-
-def test_a_damaged_result_is_computed_again(tmp_path):
-    study = study_of()
-    first = explorer.sweep(study, out=tmp_path, jobs=1)
-    (tmp_path / SWEEP_FILE).write_bytes(b"not netCDF at all")
-    assert same(first, explorer.sweep(study, out=tmp_path, jobs=1))
-    assert same(first, xr.load_dataset(tmp_path / SWEEP_FILE))
-
-
-def test_another_study_in_the_same_folder_is_not_taken_for_this_one(tmp_path):
-    first = explorer.sweep(study_of(), out=tmp_path, jobs=1)
-    other = study_of(transfer="1/(s*(2*s + 1))")
-    assert not first.equals(explorer.sweep(other, out=tmp_path, jobs=1))
-    interrupted(study_of(), tmp_path, after=1)
-    assert same(explorer.sweep(other, jobs=1), explorer.sweep(other, out=tmp_path, jobs=1))
-
-
-def test_no_damage_to_a_tile_goes_unseen(tmp_path):
-    study = study_of(gain="{ values = [1.0] }", period="{ values = [0.1] }")
-    result, store = compute(study, scenarios_of(study), Tile(0, 0, 0, 1)), TileStore(tmp_path, "key")
-    store.put(0, result)
-    (file,) = tmp_path.glob("tiles-key/*")
-    whole = file.read_bytes()
-    for place in range(0, len(whole), 3):
-        file.write_bytes(whole[:place] + bytes([whole[place] ^ 0x08]) + whole[place + 1 :])
-        found = store.get(0)  # None, or a byte was hit that says nothing, such as a date
-        if found is not None:
-            assert all(np.array_equal(vars(found)[name], value, equal_nan=True) for name, value in vars(result).items())
-    file.write_bytes(whole)
-    assert store.get(0) is not None
-    assert store.get(1) is None
-
-
-def test_wrong_options_and_folders_in_use_are_refused(tmp_path):
-    with pytest.raises(OptionError, match="jobs"):
-        explorer.sweep(study_of(), jobs=0)
-    with owned(tmp_path), pytest.raises(RunError, match="another run is writing here"):
-        explorer.sweep(study_of(), out=tmp_path, jobs=1)
-    occupied = tmp_path / "file"
-    occupied.touch()
-    with pytest.raises(RunError, match="cannot be written"):
-        explorer.sweep(study_of(), out=occupied, jobs=1)
-
-
-@pytest.mark.parametrize("parts", [LAG, SPREAD, {}], ids=["parameters", "design", "nothing"])
-def test_stored_dataset_keeps_the_contract(parts, tmp_path):
-    study = study_of(**parts)
-    kept = explorer.sweep(study, out=tmp_path, jobs=1)
-    design = ("lead",) if "axes" in parts else ()
-    with xr.open_dataset(tmp_path / SWEEP_FILE) as stored:
-        assert stored.identical(kept)
-        plane = (*design, "period", "gain")
-        assert {name: stored[name].dims for name in stored.data_vars} == {
-            "worst_value": ("measure", "tolerance_scale", *plane),
-            "nominal_value": ("measure", *plane),
-            "worst_scenario": ("measure", "tolerance_scale", *plane),
-            "share_met": ("tolerance_scale", *plane),
-            "scenario_parameter": ("scenario", "parameter"),
-            "scenario_scale": ("scenario",),
-        }
-        assert stored["measure"].values.tolist() == [one.name for one in study.requirements]
-        assert stored["period"].attrs["units"] == "s"
-        assert stored["gain"].attrs["units"] == study.gain.unit
-        assert stored["measure_unit"].values.tolist() == [one.measure.unit for one in study.requirements]
-        assert set(stored["measure"].coords) >= {"measure_kind", "measure_unit"}
-        attrs = stored.attrs
-        assert (attrs["study"], attrs["seed"]) == (text_of(**parts), study.scenarios.seed)
-        assert {"title", "study_sha256", "explorer_version", "created", "status_tally"} <= set(attrs)
 
 
 def test_units_are_stored_as_si():

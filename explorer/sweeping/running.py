@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import warnings
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import joblib
@@ -12,6 +12,7 @@ import xarray
 
 import explorer
 from explorer.errors import OptionError, RunError
+from explorer.names import SWEEP
 from explorer.study.model import Study
 from explorer.sweeping.dataset import Grid
 from explorer.sweeping.reduction import TileResult
@@ -111,11 +112,12 @@ def _finished(study: Study, file: Path) -> xarray.Dataset | None:
     except RunError:
         return None
     same = (known.attrs.get("study_sha256"), known.attrs.get("explorer_version"))
-    return known if same == (study.sha256, explorer.__version__) else None
+    whole = all(name in known.variables for name in SWEEP)
+    return known if whole and same == (study.sha256, explorer.__version__) else None
 
 
 def _computed(
-    study: Study, scenarios: Scenarios, tiles: Iterable[Tile], jobs: int
+    study: Study, scenarios: Scenarios, tiles: list[Tile], jobs: int
 ) -> Iterator[tuple[Tile, TileResult]]:
     """Tiles as they finish. Threads: LAPACK and the kernels release the interpreter, and nothing is copied."""
 
@@ -126,7 +128,8 @@ def _computed(
         yield from map(solve, tiles)
         return
     work = (joblib.delayed(solve)(tile) for tile in tiles)
-    finished = joblib.Parallel(n_jobs=jobs, prefer="threads", return_as="generator_unordered")(work)
+    workers = min(joblib.cpu_count() if jobs == -1 else jobs, len(tiles)) or 1
+    finished = joblib.Parallel(n_jobs=workers, prefer="threads", return_as="generator_unordered")(work)
     try:
         # not yield from, which would close `finished` before the warning is silenced
         for pair in finished:  # noqa: UP028

@@ -188,7 +188,7 @@ def _held(decision: Decision) -> list[str]:
             f"With the tolerances as stated every requirement holds up to a sample period of "
             f"{_period(decision, _within(slowest['period']))}{end}, at a gain of {_gain(decision, slowest['gain'])}"
             f"{_design(decision, slowest)}.",
-            f"At {_period(decision, slowest['grid_period'])} the gain may lie between {low} and {high}.",
+            f"At {_period(decision, _within(slowest['grid_period']))} the gain may lie between {low} and {high}.",
         ]
     if slowest["stopped_by"]:
         sentences.append(f"Slower is stopped by “{slowest['stopped_by']}”{_plant(decision, slowest)}.")
