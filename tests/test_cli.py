@@ -230,7 +230,7 @@ import sys, time
 from explorer.sweeping import running, tiles
 tiles.LOOPS_IN_TILE = 40
 compute = running.compute
-running.compute = lambda *words: (time.sleep(0.02), compute(*words))[1]
+running.compute = lambda *words: (time.sleep(0.25), compute(*words))[1]
 from explorer.cli import main
 main(sys.argv[1:])
 """

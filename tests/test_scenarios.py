@@ -70,7 +70,7 @@ def test_every_point_lies_in_its_box_and_the_corners_on_it():
             assert np.isclose(entered, corner, rtol=4 * EPS, atol=0).all(axis=1).any()
     assert (found.values[:, 2] == 4.0).all()
     # low + (high - low) is not high here: a corner is as written, not as rounded
-    found = table("strength = { from = 0.06, to = 0.6, nominal = 0.5 }", "strength/(s + 1)")
+    found = table("strength = { from = 0.06, to = 0.6, nominal = 0.5 }", "strength/(s + 1)", scales="[1.0]")
     assert found.values[found.scale == 1.0].max() == 0.6 != 0.06 + (0.6 - 0.06)
 
 
