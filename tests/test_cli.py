@@ -226,7 +226,8 @@ def test_a_second_run_in_one_folder_is_refused(swept, tmp_path):
 
 
 DRIVER = """
-import sys, time
+import signal, sys, time
+signal.signal(signal.SIGINT, signal.default_int_handler)  # a job in the background may inherit that it is ignored
 from explorer.sweeping import running, tiles
 tiles.LOOPS_IN_TILE = 40
 compute = running.compute

@@ -289,12 +289,14 @@ def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
         pair, turn = operations.where(slower, size, pair), operations.where(slower, own_turn, turn)
     factors = [(rows[2 * i], rows[2 * i + 1]) for i in range(degree // 2)]
     linear = rows[degree - 1] if degree % 2 else None
+    # A pair near z = 0 decides the measures of pairs when no slower pair is there
+    seen = operations.where(pair > NONE, operations.minimum(pair, slowest), slowest)
     if in_z:
-        sharp = resolved(operations, factors, linear, damping, slowest, in_z)
+        sharp = resolved(operations, factors, linear, damping, seen, in_z)
     else:
         sharp = operations.if_any(
             near_origin(factors, linear),
-            lambda: resolved(operations, factors, linear, damping, slowest, in_z),
+            lambda: resolved(operations, factors, linear, damping, seen, in_z),
             1.0,
         )
     return [slowest, damping, operations.sqrt(least), pair, turn, sharp]

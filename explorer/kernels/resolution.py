@@ -25,7 +25,7 @@ def near_origin(factors: list[tuple[Row, Row]], linear: Row | None) -> Row:
 
 
 def resolved(
-    operations: Any, factors: list[tuple[Row, Row]], linear: Row | None, damping: Row, slowest: Row, in_z: bool
+    operations: Any, factors: list[tuple[Row, Row]], linear: Row | None, damping: Row, seen: Row, in_z: bool
 ) -> Row:
     """1.0 where rounding leaves what measures need at WANTED, else 0.0.
 
@@ -54,7 +54,7 @@ def resolved(
             own = _bound(operations, factors, linear, larger)
             sharp = sharp & (apart * (square * square) * _leniency(operations, larger) >= own)
         positive = real & (total > 0.0) & (small > 0.0)
-        good = good & (sharp | positive | _harmless(small, damping, slowest))
+        good = good & (sharp | positive | _harmless(small, damping, seen))
         if in_z:
             beside = 1.0 + u + v
             good = good & (apart * (beside * beside) >= at_one)
@@ -66,7 +66,7 @@ def resolved(
             apart = apart * (value * value)
         allowed = _bound(operations, factors, linear, operations.absolute(z)) if in_z else at_one
         sharp = apart * (z * z) * _leniency(operations, operations.absolute(z)) >= allowed
-        good = good & (sharp | (z > 0.0) | _harmless(z * z, damping, slowest))
+        good = good & (sharp | (z > 0.0) | _harmless(z * z, damping, seen))
         if in_z:
             good = good & (apart * ((1.0 - z) * (1.0 - z)) >= at_one)
     return operations.where(good, 1.0, 0.0)
@@ -94,10 +94,10 @@ def _leniency(operations: Any, size: Row) -> Row:
     return result
 
 
-def _harmless(small: Row, damping: Row, slowest: Row) -> Row:
+def _harmless(small: Row, damping: Row, seen: Row) -> Row:
     """A factor that is not near z = 0 (small : |z|²), or cannot be the least damped one.
 
-    With |z|² < 0.04 no damping ratio is below 0.45, with |z|² < 0.5 none below 0.1; the slowest pole is another one
-    when its log|z| is above that of all such factors.
+    With |z|² < 0.04 no damping ratio is below 0.45, with |z|² < 0.5 none below 0.1; the slowest pole and the slowest
+    pair are others when their log|z|, `seen`, is above that of all such factors.
     """
-    return (small > 0.5) | ((slowest > -0.35) & (((damping < 0.45) & (small < 0.04)) | (damping < 0.1)))
+    return (small > 0.5) | ((seen > -0.35) & (((damping < 0.45) & (small < 0.04)) | (damping < 0.1)))
