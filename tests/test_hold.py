@@ -17,7 +17,7 @@ from mpmath import mp
 from oracle import reference
 from small_study import closed_loop_poles, study_of, swept
 
-from explorer.kernels.hold import exponential_of_triangle, sample_with_hold
+from explorer.kernels.hold import exponential_of_triangle, sample_with_hold, whole_samples
 from explorer.kernels.roots import SOLVED, TOO_LONG
 from explorer.loop.compensator import compensator_on_axes
 from explorer.loop.plant import Realisation, in_series, realise_states, realise_transfer
@@ -57,10 +57,9 @@ def held(plant: Realisation, period, delay):
     times = np.atleast_2d(np.asarray(period, float))
     dead_time = np.broadcast_to(np.asarray(delay, float), times.shape).copy()
     above, below = (np.empty((1, times.size, 2, plant.order + 1)) for _ in range(2))
-    whole = np.empty((1, times.size), np.int64)
-    sample_with_hold(
-        plant.state, plant.start, plant.output, plant.direct, times, dead_time, above, below, whole
-    )
+    whole, advance = np.empty((1, times.size), np.int64), np.empty((1, times.size))
+    whole_samples(times, dead_time, whole, advance)
+    sample_with_hold(plant.state, plant.start, plant.output, plant.direct, times, advance, above, below)
     return above[0], below[0], whole[0]
 
 
@@ -323,16 +322,16 @@ def test_absurdly_long_dead_time_is_a_status():
 
 PLAIN_PYTHON = """
 import numpy as np
-from explorer.kernels.hold import sample_with_hold
+from explorer.kernels.hold import sample_with_hold, whole_samples
 from explorer.loop.plant import realise_transfer
 from explorer.study.expressions import read_expression
 assert not hasattr(sample_with_hold, "py_func")  # nothing is compiled here
 plant = realise_transfer(read_expression("(s + 0.5)/((s + 1)*(s^2 + 0.2*s + 1)*s)"), {}, 1)
 period, delay = np.array([[0.01, 0.5]]), np.array([[0.013, 1.0]])
 above, below = np.empty((1, 2, 2, 5)), np.empty((1, 2, 2, 5))
-sample_with_hold(
-    plant.state, plant.start, plant.output, plant.direct, period, delay, above, below, np.empty((1, 2), np.int64)
-)
+whole, advance = np.empty((1, 2), np.int64), np.empty((1, 2))
+whole_samples(period, delay, whole, advance)
+sample_with_hold(plant.state, plant.start, plant.output, plant.direct, period, advance, above, below)
 print(*map(float.hex, np.concatenate([above.ravel(), below.ravel()]).tolist()))
 """
 

@@ -119,8 +119,9 @@ def test_equal_values_and_unknown_ones_are_put_down_to_the_first_scenario(turned
     values = {0: [3.0, 1.0, 9.0], 1: [5.0, np.nan, 1.0], 2: [5.0, np.nan, np.nan]}
     worst, place = np.full((1, 1, 3), -np.inf), np.full((1, 1, 3), -1, np.int32)
     for scenario in sorted(values, reverse=turned):
-        lanes = np.array(values[scenario]).reshape(1, 3, 1)
-        keep_worst(lanes, 1, np.array([scenario]), np.array([0]), np.array([0]), 1.0, worst, place)
+        lanes, met = np.array(values[scenario]).reshape(1, 3, 1), np.ones((1, 3, 1), bool)
+        keep_worst(lanes, 1, np.array([scenario]), np.array([0]), np.array([0]), 1.0, False, np.array([4.0]), met, worst, place)
+        assert met.ravel().tolist() == [value <= 4.0 for value in values[scenario]]
     assert place.tolist() == [[[1, 1, 2]]]
     np.testing.assert_array_equal(worst, [[[5.0, np.nan, np.nan]]])
 
@@ -130,6 +131,7 @@ def many_tiles(monkeypatch):
     """A cut so fine that these small sweeps take several tiles and several blocks of scenarios."""
     monkeypatch.setattr(tiles, "LOOPS_IN_TILE", 400)
     monkeypatch.setattr(tiles, "LOOPS_AT_ONCE", 30)
+    monkeypatch.setattr(tiles, "FEWEST_LOOPS", 1)
 
 
 def test_any_number_of_workers_gives_the_same_bits(many_tiles):
@@ -152,7 +154,7 @@ def test_tiles_may_finish_in_any_order(many_tiles):
     study = study_of(**TOO_LONG | {"period": "{ values = [0.08, 0.09, 0.1, 2.0] }"})
     scenarios = scenarios_of(study)
     cut = [Tile(index, 0, index, index + 1) for index in range(4)]
-    results = [compute(study, scenarios, tile) for tile in cut]
+    results = [compute(study, scenarios, tile, frozenset()) for tile in cut]
     forward, backward = Grid(study, scenarios), Grid(study, scenarios)
     for tile, result in zip(cut, results, strict=True):
         forward.put(tile, result)

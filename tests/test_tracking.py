@@ -42,10 +42,10 @@ def track(constant, slope, gain, in_z=False):
     lanes = [
         np.ascontiguousarray(part[rows].reshape(blocks, LANES, -1).transpose(0, 2, 1)) for part in (constant, slope)
     ]
-    found = np.empty((blocks, len(gain), REDUCTIONS, LANES))
+    found = np.empty((REDUCTIONS, blocks, len(gain), LANES))
     marks = np.empty((blocks, len(gain), LANES))
     tracker(degree, in_z)(*lanes, gain_steps(gain), found, marks)
-    flat = found.transpose(2, 1, 0, 3).reshape(REDUCTIONS, len(gain), -1)[: REDUCTIONS - 1, :, :count]
+    flat = found.transpose(0, 2, 1, 3).reshape(REDUCTIONS, len(gain), -1)[: REDUCTIONS - 1, :, :count]
     return flat, marks.transpose(1, 0, 2).reshape(len(gain), -1)[:, :count] == 1.0
 
 

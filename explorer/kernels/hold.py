@@ -21,12 +21,14 @@ from explorer.kernels.compiling import compiled
 
 _WHOLE = 1e-12  # dead times this close to a whole number of samples are that number
 _MOST_SAMPLES = 1e9  # dead times beyond this are this: no loop is solved with anything like it
-_TERMS = 20  # Taylor terms for a norm of at most 1/2: the remainder is below 0.5**20/20! = 4e-25
+_NEGLECTED = 1e-19  # first Taylor term left out, relative to the corner entry norm**k/k!, which is the smallest
 
 
 @compiled()
 def _exponential_minus_one(x: complex) -> complex:
     """exp(x) - 1 without cancellation."""
+    if x.imag == 0.0:  # most plants; the sine and cosine cost more than the rest
+        return complex(math.expm1(x.real), 0.0)
     half = math.sin(0.5 * x.imag)
     grown = math.exp(x.real)
     return complex(math.expm1(x.real) * math.cos(x.imag) - 2.0 * half * half, grown * math.sin(x.imag))
@@ -34,6 +36,8 @@ def _exponential_minus_one(x: complex) -> complex:
 
 @compiled()
 def _exponential(x: complex) -> complex:
+    if x.imag == 0.0:
+        return complex(math.exp(x.real), 0.0)
     grown = math.exp(x.real)
     return complex(grown * math.cos(x.imag), grown * math.sin(x.imag))
 
@@ -73,7 +77,7 @@ def exponential_of_triangle(
     for i in range(size):  # Taylor by Horner: result = I + X(I + X/2(I + X/3(...)))
         for j in range(size):
             result[i, j] = 1.0 if i == j else 0.0
-    for term in range(_TERMS, 0, -1):
+    for term in range(_terms(norm, size - 1), 0, -1):
         _multiply_triangles(matrix, result, scaled / term, spare)
         for i in range(size):
             for j in range(i + 1):
@@ -85,6 +89,16 @@ def exponential_of_triangle(
             for j in range(i + 1):
                 result[i, j] = spare[i, j]
         _put_exact(matrix, time / 2.0 ** (squarings - 1 - squaring), result)
+
+
+@compiled()
+def _terms(norm: float, corner: int) -> int:
+    """Taylor terms that give an entry of the size norm**corner/corner! to rounding, for a norm of at most 1/2."""
+    term, rest = corner, 1.0
+    while rest > _NEGLECTED:
+        term += 1
+        rest *= norm / term
+    return term
 
 
 @compiled()
@@ -120,12 +134,14 @@ def _add_response(
     running: NDArray[Any],
     product: NDArray[Any],
 ) -> None:
-    """Add output (x I - M)^-1 start * Π(x - roots) to `total` (ascending powers), times (slope + x) if shift.
+    """Add output (x I - M)^-1 start * Π(x - roots) to `total` (descending powers), times (slope + x) if shift.
 
     M has the roots on its diagonal and the off-diagonals of `step`. Row k of the solution has the denominator
     Π_{i<=k}(x - roots_i); `running[j]` is row j brought to the denominator reached so far.
     """
     n = roots.shape[0]
+    if not np.any(start):  # nothing is held after its change when the dead time is whole
+        return
     product[:] = 0.0
     product[0] = 1.0
     for k in range(n):
@@ -142,10 +158,10 @@ def _add_response(
         for k in range(n):
             value += (output[k] * running[k, power]).real
         if shift:
-            total[power] += slope * value
-            total[power + 1] += value
+            total[n - power] += slope * value
+            total[n - power - 1] += value
         else:
-            total[power] += value
+            total[n - power] += value
 
 
 @compiled()
@@ -163,118 +179,121 @@ def sample_with_hold(
     output: NDArray[Any],
     direct: NDArray[Any],
     period: NDArray[Any],
-    dead_time: NDArray[Any],
+    advance: NDArray[Any],
     numerator: NDArray[Any],
     denominator: NDArray[Any],
-    whole: NDArray[Any],
 ) -> None:
     """Pulse-transfer polynomials of every (scenario, period).
 
     Parameters
     ----------
     state : (S, n, n) complex lower triangular [1/s]; start (input) : (S, n); output : (S, n); direct : (S,).
-    period : (S, P) [s], true sample periods; dead_time : (S, P) [s], total from sample taken to plant output.
+    period : (S, P) [s], true sample periods; advance : (S, P) [s], by which the total dead time falls short of
+        `whole` periods, see `whole_samples`.
     numerator, denominator : (S, P, 2, n+1) out, descending powers; index 0 in w = z - 1, index 1 in z.
         The transfer is numerator / (denominator * z**whole). Infinite or NaN where it overflows.
-    whole : (S, P) int64 out, whole samples of delay.
 
     With direct feedthrough and a dead time of exactly `whole` periods, the sample sees u[k - whole].
     """
     scenarios, n = start.shape
     augmented = np.zeros((n + 1, n + 1), np.complex128)
-    full = np.empty_like(augmented)
-    early, late = np.empty(n, np.complex128), np.empty(n, np.complex128)
+    work = np.empty((4, n + 1, n + 1), np.complex128)
+    rows = np.empty((6, n + 1), np.complex128)
     for scenario in range(scenarios):
         augmented[1:, 0] = start[scenario]
         augmented[1:, 1:] = state[scenario]
         for column in range(period.shape[1]):
             time = period[scenario, column]
-            count, advance = _whole_samples(dead_time[scenario, column], time)
-            whole[scenario, column] = count
-            _held_input(augmented, time, advance, full, early, late)
+            _held_input(augmented, time, advance[scenario, column], work, rows)
             for variable in range(2):
                 _transfer(
-                    state[scenario],
-                    full,
+                    augmented,
                     time,
-                    early,
-                    late,
                     output[scenario],
                     direct[scenario],
                     variable,
+                    work,
+                    rows,
                     numerator[scenario, column, variable],
                     denominator[scenario, column, variable],
                 )
 
 
 @compiled()
-def _whole_samples(delay: float, time: float) -> tuple[int, float]:
-    """delay = count * time - advance with 0 <= advance < time."""
-    samples = min(delay / time, _MOST_SAMPLES)
-    count = round(samples)
-    if abs(samples - count) <= _WHOLE * max(1.0, samples):
-        return int(count), 0.0
-    count = math.ceil(samples)
-    return int(count), min(count * time - delay, time)
+def whole_samples(period: NDArray[Any], dead_time: NDArray[Any], whole: NDArray[Any], advance: NDArray[Any]) -> None:
+    """dead_time = whole * period - advance with 0 <= advance < period.
+
+    period, dead_time : (S, P) [s], the dead time in all, from sample taken to plant output. whole : (S, P) int64 out;
+    advance : (S, P) [s] out.
+    """
+    for scenario in range(period.shape[0]):
+        for column in range(period.shape[1]):
+            time, delay = period[scenario, column], dead_time[scenario, column]
+            samples = min(delay / time, _MOST_SAMPLES)
+            count = round(samples)
+            if abs(samples - count) <= _WHOLE * max(1.0, samples):
+                whole[scenario, column], advance[scenario, column] = int(count), 0.0
+            else:
+                count = math.ceil(samples)
+                whole[scenario, column], advance[scenario, column] = int(count), min(count * time - delay, time)
 
 
 @compiled()
 def _held_input(
-    augmented: NDArray[Any],
-    time: float,
-    advance: float,
-    full: NDArray[Any],
-    early: NDArray[Any],
-    late: NDArray[Any],
+    augmented: NDArray[Any], time: float, advance: float, work: NDArray[Any], rows: NDArray[Any]
 ) -> None:
-    """exp(augmented * time), and what one held sample adds to the state before (early) and after its change (late).
+    """work[0] = exp(augmented * time); rows[0], rows[1] = what one held sample adds to the state before its change
+    (early) and after it (late), from entry 1 on. The rest of work is overwritten.
 
     augmented : [[0, 0], [start, state]]; the first column of its exponential is the integral of exp(state t) start.
     """
-    n = early.shape[0]
-    spare = np.empty_like(full)
-    exponential_of_triangle(augmented, time, full, spare)
+    size = augmented.shape[0]
+    full, part, rest, spare = work[0], work[1], work[2], work[3]
+    early, late = rows[0], rows[1]
     if advance == 0.0:
-        early[:] = full[1:, 0]
-        late[:] = 0.0
+        exponential_of_triangle(augmented, time, full, spare)
+        for i in range(1, size):
+            early[i], late[i] = full[i, 0], 0.0
         return
-    part, rest = np.empty_like(full), np.empty_like(full)
     exponential_of_triangle(augmented, advance, part, spare)
     exponential_of_triangle(augmented, time - advance, rest, spare)
-    late[:] = part[1:, 0]
-    for i in range(n):
-        early[i] = 0.0
-        for j in range(i + 1):
-            early[i] += part[i + 1, j + 1] * rest[j + 1, 0]
+    _multiply_triangles(part, rest, 1.0, full)
+    _put_exact(augmented, time, full)
+    for i in range(1, size):
+        late[i], early[i] = part[i, 0], 0.0
+        for j in range(1, i + 1):
+            early[i] += part[i, j] * rest[j, 0]
 
 
 @compiled()
 def _transfer(
-    state: NDArray[Any],
-    full: NDArray[Any],
+    augmented: NDArray[Any],
     time: float,
-    early: NDArray[Any],
-    late: NDArray[Any],
     output: NDArray[Any],
     direct: float,
     variable: int,
+    work: NDArray[Any],
+    rows: NDArray[Any],
     numerator: NDArray[Any],
     denominator: NDArray[Any],
 ) -> None:
-    """Numerator and denominator, (n+1,) descending, in w (variable 0) or z (variable 1)."""
-    n = early.shape[0]
-    roots, below = np.empty(n, np.complex128), np.zeros(n + 1, np.complex128)
-    running, product = np.empty((n, n + 1), np.complex128), np.empty(n + 1, np.complex128)
-    above = np.zeros(n + 2)
+    """Numerator and denominator, (n+1,) descending, in w (variable 0) or z (variable 1), of what `_held_input` found;
+    work[1] and rows[2:] are overwritten.
+    """
+    n = output.shape[0]
+    roots, below, product, running = rows[2, :n], rows[3], rows[4], work[1]
+    below[:] = 0.0
     below[0] = 1.0
     for i in range(n):
-        exponent = state[i, i] * time
+        exponent = augmented[i + 1, i + 1] * time
         roots[i] = _exponential_minus_one(exponent) if variable == 0 else _exponential(exponent)
         _times_root(below, roots[i], n + 1)
     slope = 1.0 if variable == 0 else 0.0  # z = 1 + w
-    step = full[1:, 1:]
-    _add_response(step, roots, early, output, 0, slope, above, running, product)
-    _add_response(step, roots, late, output, 1, slope, above, running, product)
     for power in range(n + 1):
-        numerator[n - power] = above[power] + direct * below[power].real
+        numerator[power] = 0.0
+    step = work[0, 1:, 1:]
+    _add_response(step, roots, rows[0, 1:], output, 0, slope, numerator, running, product)
+    _add_response(step, roots, rows[1, 1:], output, 1, slope, numerator, running, product)
+    for power in range(n + 1):
         denominator[n - power] = below[power].real
+        numerator[n - power] += direct * below[power].real

@@ -184,12 +184,12 @@ class ArrayOperations:
 
 
 def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
-    """A function (degree, source, row, …, target, row) for compiled kernels: target rows = formula(…, *source rows).
+    """A function (degree, source, row, …, target, row, apart) for compiled kernels: target rows = formula(…, *source rows).
 
     degree : a literal while numba compiles, so each degree has instructions of its own. Then one pair per entry of
     inputs(degree): a C array and the row to read from; an entry is how many rows of LANES numbers, or, negative, how
-    many single numbers of a 2-D array's row, the same in every lane. Last the target and its first row; it must
-    not overlap a source. Returns how many lanes of the last result row are 1.
+    many single numbers of a 2-D array's row, the same in every lane. Last the target, its first row and how far the
+    next ones are apart; it must not overlap a source. Returns how many lanes of the last result row are 1.
     """
 
     @_intrinsic
@@ -206,11 +206,12 @@ def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
                 array = context.make_array(kinds[2 * k])(context, builder, items[2 * k])
                 rows += _read(builder, array, items[2 * k + 1], size)
             results = formula(SymbolOperations(builder), count, *rows)
-            target = context.make_array(kinds[-2])(context, builder, items[-2])
+            target = context.make_array(kinds[-3])(context, builder, items[-3])
             base = builder.bitcast(target.data, _VECTOR.as_pointer())
-            for k, result in enumerate(results):
-                place = builder.gep(base, [builder.add(items[-1], ir.Constant(_INDEX, k))])
-                builder.store(result.value, place).align = 8
+            row = items[-2]
+            for result in results:
+                builder.store(result.value, builder.gep(base, [row])).align = 8
+                row = builder.add(row, items[-1])
             return _count_ones(builder, results[-1])
 
         return types.int64(degree, arguments), codegen

@@ -76,13 +76,14 @@ def _track(
     Parameters
     ----------
     degree, code : literals, see factors.reduced; constant, slope : (blocks, degree+1, LANES) descending powers of w.
-    steps : (G, 5) from `gain_steps`. reductions : (blocks, G, REDUCTIONS, LANES) out, see factors.reduced.
+    steps : (G, 5) from `gain_steps`. reductions : (REDUCTIONS, blocks, G, LANES) out, see factors.reduced.
     certificates : (blocks, G, LANES) out, 1.0 where the poles are certified and resolved; the reductions
         elsewhere mean nothing.
     """
     degree, code = literally(degree), literally(code)
     gains, blocks = steps.shape[0], constant.shape[0]
-    found, marks = reductions.reshape(blocks * gains * REDUCTIONS, LANES), certificates.reshape(blocks * gains, LANES)
+    loops = blocks * gains
+    found, marks = reductions.reshape(REDUCTIONS * loops, LANES), certificates.reshape(loops, LANES)
     past = np.zeros(((gains + 4) * degree + 1, LANES))  # factors of all gains, four rows of room before them
     stride = 0 if constant.shape[1] == degree + 1 else degree + 1
     for block in range(blocks):
@@ -90,15 +91,15 @@ def _track(
         for index in range(gains):
             here, at = (index + 4) * degree, index * stride
             if index > 0:
-                good = _advance(degree, (steps, index, below, at, above, at, past, here - 4 * degree, past, here))
+                good = _advance(degree, (steps, index, below, at, above, at, past, here - 4 * degree, past, here, 1))
             else:  # the block before began nearby
                 forget(past, here, degree)
-                good = _repeat(degree, (steps, 0, below, at, above, at, past, here, past, here))
+                good = _repeat(degree, (steps, 0, below, at, above, at, past, here, past, here, 1))
             for attempt in range(3):
                 for _ in range(_MOST_ROUNDS):
                     if good == LANES:
                         break
-                    good = _repeat(degree, (steps, index, below, at, above, at, past, here, past, here))
+                    good = _repeat(degree, (steps, index, below, at, above, at, past, here, past, here, 1))
                 if good == LANES or attempt == 2:
                     break
                 for lane in range(LANES):
@@ -108,9 +109,9 @@ def _track(
                         else:
                             solve_afresh(below, above, at, degree, steps[index, 0], lane, past, here)
             row = block * gains + index
-            _reduce(code, (past, here, found, row * REDUCTIONS))
+            _reduce(code, (past, here, found, row, loops))
             for lane in range(LANES):
-                marks[row, lane] = past[here + degree, lane] * found[row * REDUCTIONS + REDUCTIONS - 1, lane]
+                marks[row, lane] = past[here + degree, lane] * found[row + (REDUCTIONS - 1) * loops, lane]
 
 
 def gain_steps(gain: NDArray[np.float64]) -> NDArray[np.float64]:

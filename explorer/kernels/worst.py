@@ -20,6 +20,9 @@ def keep_worst(
     column: Array,
     scale: Array,
     sign: float,
+    strict: bool,
+    limit: Array,
+    met: Array,
     worst: Array,
     place: Array,
 ) -> None:
@@ -29,7 +32,8 @@ def keep_worst(
     ----------
     values : (blocks, G, LANES); pair k is lane k % LANES of block k // LANES. scenario, column, scale : (M,) of each
         pair, scenarios ascending within a column.
-    sign : +1 when larger is worse, -1 when smaller is. worst : (scales, P, G) of sign * value, NaN unknown, in place;
+    sign : +1 when larger is worse, -1 when smaller is. strict : whether a value at the limit misses it.
+    limit : (P,); met : (blocks, G, LANES) bool, made false where the limit is missed or the value NaN. worst : (scales, P, G) of sign * value, NaN unknown, in place;
         place : (scales, P, G) int32, -1 where nothing was seen. The first NaN wins over every number; of equal values
         the lowest scenario stays.
     """
@@ -37,8 +41,10 @@ def keep_worst(
     for pair in range(pairs):
         block, lane = pair // lanes, pair % lanes
         level, period, number = scale[pair], column[pair], scenario[pair]
+        bound = sign * limit[period]
         for step in range(values.shape[1]):
             value = sign * values[block, step, lane]
+            met[block, step, lane] &= value < bound or (value == bound and not strict)
             old, known = worst[level, period, step], place[level, period, step]
             if known < 0:
                 worst[level, period, step], place[level, period, step] = value, number

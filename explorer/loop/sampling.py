@@ -7,7 +7,7 @@ from collections.abc import Mapping
 import numpy as np
 from numpy.typing import NDArray
 
-from explorer.kernels.hold import sample_with_hold
+from explorer.kernels.hold import sample_with_hold, whole_samples
 from explorer.loop.closing import Sampled
 from explorer.loop.plant import Realisation, in_series, rational_in, realise_states, realise_transfer
 from explorer.study.expressions import ExpressionError
@@ -47,17 +47,31 @@ def sample(study: Study, values: Mapping[str, Real], period: Real) -> Sampled:
         return _sampled_already(study, values, period)
     realisation = realise(study, values)
     scenarios, order = realisation.start.shape
-    true_period = np.multiply.outer(values["clock"], period)
-    dead_time = dead_times(study, values)[:, None] + study.loop.computing_delay.seconds
-    dead_time = dead_time + study.loop.computing_delay.periods * true_period
+    true_period, whole, advance = delays_of(study, values, period)
     numerator = np.empty((scenarios, len(period), 2, order + 1))
     denominator = np.empty_like(numerator)
-    whole = np.empty((scenarios, len(period)), np.int64)
     sample_with_hold(
         realisation.state, realisation.start, realisation.output, realisation.direct,
-        true_period, dead_time, numerator, denominator, whole,
+        true_period, advance, numerator, denominator,
     )  # fmt: skip
     return Sampled(numerator, denominator, whole, true_period)
+
+
+def delays_of(study: Study, values: Mapping[str, Real], period: Real) -> tuple[Real, NDArray[np.int64], Real]:
+    """True periods [s], whole samples of delay, and the advance [s] that whole samples have on the true delay.
+
+    Each is (S, P); (S, 1) for a plant given in z, where only whole samples of delay exist and the advance is 0.
+    """
+    delay = study.loop.computing_delay
+    if study.plant.variable == "z":
+        samples = dead_times(study, values) / period[0] + delay.seconds / period[0] + delay.periods
+        whole = np.rint(samples).astype(np.int64)[:, None]
+        return np.full(whole.shape, period[0]), whole, np.zeros(whole.shape)
+    true_period = np.multiply.outer(values["clock"], period)
+    dead_time = dead_times(study, values)[:, None] + delay.seconds + delay.periods * true_period
+    whole, advance = np.empty(true_period.shape, np.int64), np.empty(true_period.shape)
+    whole_samples(true_period, dead_time, whole, advance)
+    return true_period, whole, advance
 
 
 def dead_times(study: Study, values: Mapping[str, Real]) -> Real:
@@ -88,13 +102,12 @@ def _sampled_already(study: Study, values: Mapping[str, Real], period: Real) -> 
             )  # fmt: skip
         padded[:, denominator.shape[-1] - numerator.shape[-1] :] = numerator
         parts.append((padded, np.broadcast_to(denominator, padded.shape)))
-    delay = dead_times(study, values) / period[0] + study.loop.computing_delay.seconds / period[0]
-    whole = np.rint(delay + study.loop.computing_delay.periods).astype(np.int64)
+    true_period, whole, _ = delays_of(study, values, period)
     return Sampled(
         np.stack([above for above, _ in parts], axis=1)[:, None],
         np.stack([below for _, below in parts], axis=1)[:, None],
-        whole[:, None],
-        np.full((scenarios, 1), period[0]),
+        whole,
+        true_period,
     )
 
 

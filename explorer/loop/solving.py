@@ -28,7 +28,7 @@ _LAPACK_AT_ONCE = 20_000  # polynomials, to bound memory
 
 
 class Solved(NamedTuple):
-    """reductions : (blocks, G, REDUCTIONS, LANES), see kernels.factors.reduced, NaN where not solved;
+    """reductions : (REDUCTIONS, blocks, G, LANES), see kernels.factors.reduced, NaN where not solved;
     status : (blocks, G, LANES) int8. Pair k of the group is lane k % LANES of block k // LANES; the last block is
     filled up with repeats of the last pair.
     """
@@ -45,7 +45,7 @@ def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real,
     """
     degree, pairs = degree_of(sampled, compensator, group.delay), len(group.rows)
     blocks, gain = -(-pairs // LANES), steps[:, 0]
-    reductions = np.empty((blocks, len(gain), REDUCTIONS, LANES))
+    reductions = np.empty((REDUCTIONS, blocks, len(gain), LANES))
     status = np.full((blocks, len(gain), LANES), SOLVED, np.int8)
     if degree > HIGHEST_DEGREE:
         status[:], reductions[:] = TOO_LONG, np.nan
@@ -79,10 +79,11 @@ def _track_in_z(degree: int, in_z: tuple[Real, Real], steps: Real, reductions: R
     if not len(blocks):
         return
     constant, slope = (_in_lanes(part, len(certificates))[blocks] for part in in_z)
-    again, marks = np.empty((len(blocks), *reductions.shape[1:])), np.empty((len(blocks), *certificates.shape[1:]))
+    marks = np.empty((len(blocks), *certificates.shape[1:]))
+    again = np.empty((REDUCTIONS, *marks.shape))
     tracker(degree, in_z=True)(constant, slope, steps, again, marks)
     better = (marks == 1.0) & (certificates[blocks] != 1.0)
-    reductions[blocks] = np.where(better[:, :, None], again, reductions[blocks])
+    reductions[:, blocks] = np.where(better, again, reductions[:, blocks])
     certificates[blocks] = np.where(better, 1.0, certificates[blocks])
 
 
@@ -103,7 +104,7 @@ def _solve_rest(
         rows, at = pair[part], step[part] if own_gains > 1 else 0
         factor = gain[step[part], None]
         found = poles(*(constant[rows, at] + factor * slope[rows, at] for constant, slope in (in_w, in_z)))
-        place = block[part], step[part], slice(None, REDUCTIONS - 1), lane[part]
-        reductions[place] = np.where(found.status == SOLVED, reductions_of(found.log_z), np.nan).T
+        place = slice(None, REDUCTIONS - 1), block[part], step[part], lane[part]
+        reductions[place] = np.where(found.status == SOLVED, reductions_of(found.log_z), np.nan)
         status[block[part], step[part], lane[part]] = found.status
 

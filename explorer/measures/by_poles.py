@@ -42,8 +42,10 @@ def natural_frequency(poles: Reduced, period: Real) -> Real:
 def settling_time(poles: Reduced, period: Real, band: float) -> Real:
     """ln(1/band)/sigma [s]; +inf when the slowest pole does not decay, 0 when all poles are at z = 0."""
     with np.errstate(divide="ignore"):
-        time = (np.log(band) * period) / poles.slowest
-    return np.where(poles.slowest >= 0, np.inf, np.where(poles.slowest <= FLOOR, 0.0, time))
+        time = np.asarray((np.log(band) * period) / poles.slowest)
+    np.putmask(time, poles.slowest >= 0, np.inf)
+    np.putmask(time, poles.slowest <= FLOOR, 0.0)
+    return time
 
 
 def time_to_peak(poles: Reduced, period: Real) -> Real:

@@ -45,7 +45,7 @@ def estimate(study: Study) -> tuple[Scenarios, Estimate]:
     seconds = 0.0
     for _ in range(2):
         start = time.perf_counter()
-        compute(part, table, Tile(0, 0, 0, len(few)))
+        compute(part, table, Tile(0, 0, 0, len(few)), frozenset())
         seconds = time.perf_counter() - start
     workers = min(joblib.cpu_count(), len(tiles))
     cells = loops // len(scenarios.scale)

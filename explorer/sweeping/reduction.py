@@ -56,18 +56,17 @@ class Reduction:
         """Measure a group's loops and merge them; true_period : (M,) of its pairs."""
         pairs = len(group.rows)
         lanes = np.minimum(np.arange(len(solved.status) * LANES), pairs - 1).reshape(-1, LANES)
-        period, column = true_period[lanes][:, None], group.columns[lanes][:, None]
-        poles = Reduced(*(solved.reductions[:, :, row] for row in range(len(Reduced._fields))))
+        period = true_period[lanes][:, None]
+        poles = Reduced(*solved.reductions[: len(Reduced._fields)])
         self._count(solved.status, group, pairs)
         scale = self.entry[group.rows]
         met = np.ones(solved.status.shape, bool)
         for index, one in enumerate(self.study.requirements):
             value = BY_POLES[one.measure.key](poles, period, one.band)
-            limit = self.limits[index][column]
-            met &= value < limit if one.sense == "below" else self.signs[index] * (value - limit) <= 0
             keep_worst(
-                value, pairs, group.rows, group.columns, scale, self.signs[index], self.worst[index], self.place[index]
-            )
+                value, pairs, group.rows, group.columns, scale, self.signs[index], one.sense == "below",
+                self.limits[index], met, self.worst[index], self.place[index],
+            )  # fmt: skip
             for pair in np.flatnonzero(group.rows == 0):
                 self.nominal[index, group.columns[pair]] = value[pair // LANES, :, pair % LANES]
         count_met(met, pairs, group.columns, scale, self.met)

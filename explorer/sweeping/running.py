@@ -18,7 +18,7 @@ from explorer.sweeping.dataset import Grid
 from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios, scenarios_of
 from explorer.sweeping.store import SWEEP_FILE, TileStore, owned, read_dataset, write_dataset
-from explorer.sweeping.tiles import Tile, compute, tiles_of
+from explorer.sweeping.tiles import Tile, compute, tiles_of, tracked_delays
 
 Progress = Callable[[int, int], None]  # tiles finished, tiles in all
 
@@ -121,8 +121,12 @@ def _computed(
 ) -> Iterator[tuple[Tile, TileResult]]:
     """Tiles as they finish. Threads: LAPACK and the kernels release the interpreter, and nothing is copied."""
 
+    if not tiles:
+        return
+    tracked = tracked_delays(study, scenarios)
+
     def solve(tile: Tile) -> tuple[Tile, TileResult]:
-        return tile, compute(study, scenarios, tile)
+        return tile, compute(study, scenarios, tile, tracked)
 
     if jobs == 1:
         yield from map(solve, tiles)

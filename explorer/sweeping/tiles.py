@@ -6,6 +6,7 @@ scenarios. The cut depends on the study alone, never on the number of workers, s
 
 from __future__ import annotations
 
+from collections import Counter
 from typing import NamedTuple
 
 import numpy as np
@@ -15,7 +16,7 @@ from explorer.kernels.lanes import LANES
 from explorer.kernels.tracking import gain_steps
 from explorer.loop.closing import Group, Sampled, groups_of
 from explorer.loop.compensator import Compensator, compensator_on_axes
-from explorer.loop.sampling import sample
+from explorer.loop.sampling import delays_of, sample
 from explorer.loop.solving import solve
 from explorer.study.expressions import ExpressionError
 from explorer.study.model import Study
@@ -25,12 +26,14 @@ from explorer.sweeping.scenarios import Scenarios
 
 Real = NDArray[np.float64]
 
+_DELAYS_AT_ONCE = 1_000_000
 LOOPS_IN_TILE = 2_000_000  # a fraction of a second of work, and what a killed run can lose
-LOOPS_AT_ONCE = 200_000  # bounds memory, and the work between two looks at it by the interpreter
+LOOPS_AT_ONCE = 100_000  # bounds memory; half of it or double are slower
 
 # Tracking is compiled for each degree, a few seconds on a new machine: not worth it for fewer loops of one degree in
-# a tile, unless the sweep is long. Both depend on the study alone, so the numbers never depend on what is compiled.
-WORTH_TRACKING, MANY_LOOPS = 500_000, 10_000_000
+# the whole sweep. That depends on the study alone, so the numbers never depend on what is compiled.
+WORTH_TRACKING = 50_000
+FEWEST_TILES, FEWEST_LOOPS = 8, 50_000  # tiles for the workers to share, unless they would be smaller than that
 
 
 class Tile(NamedTuple):
@@ -47,7 +50,8 @@ def tiles_of(study: Study, scenarios: int) -> list[Tile]:
     designs = int(np.prod([len(axis.values) for axis in study.design], dtype=int))
     length = len(study.period.values)
     gains = len(study.gain.values)
-    step = int(np.clip(min(LOOPS_IN_TILE // (scenarios * gains), LOOPS_AT_ONCE // gains), 1, length))
+    shared = max(designs * length // FEWEST_TILES, FEWEST_LOOPS // (scenarios * gains) + 1)
+    step = int(np.clip(min(LOOPS_IN_TILE // (scenarios * gains), LOOPS_AT_ONCE // gains, shared), 1, length))
     cuts = [(design, start) for design in range(designs) for start in range(0, length, step)]
     return [
         Tile(number, design, start, min(start + step, length)) for number, (design, start) in enumerate(cuts)
@@ -61,8 +65,21 @@ def design_values(study: Study, design: int) -> dict[str, float]:
     return {axis.name: float(axis.values[index]) for axis, index in zip(study.design, place, strict=True)}
 
 
-def compute(study: Study, scenarios: Scenarios, tile: Tile) -> TileResult:
+def tracked_delays(study: Study, scenarios: Scenarios) -> frozenset[int]:
+    """The whole-sample delays of which the sweep has loops enough to track their poles."""
+    table, period, count = scenarios.by_name(), study.period.values, Counter[int]()
+    step = max(1, _DELAYS_AT_ONCE // len(scenarios.scale))
+    for start in range(0, len(period), step):
+        delays, pairs = np.unique(delays_of(study, table, period[start : start + step])[1], return_counts=True)
+        count.update(dict(zip(delays.tolist(), pairs.tolist(), strict=True)))
+    each = loops_in(study, 1) // len(period)  # gains and designs of one pair of scenario and period
+    return frozenset(delay for delay, pairs in count.items() if pairs * each >= WORTH_TRACKING)
+
+
+def compute(study: Study, scenarios: Scenarios, tile: Tile, tracked: frozenset[int]) -> TileResult:
     """Solve one tile.
+
+    tracked : from `tracked_delays`; loops of other delays are solved by companion eigenvalues.
 
     Raises StudyError where an expression has no value somewhere on the axes or in the tolerance box.
     """
@@ -71,13 +88,11 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile) -> TileResult:
     sampled = _sampled(study, scenarios.by_name(), period)
     reduction, steps = Reduction(study, scenarios, period), gain_steps(gain)
     pairs = max(LANES, LOOPS_AT_ONCE // len(gain) // LANES * LANES)
-    many = loops_in(study, len(scenarios.scale)) >= MANY_LOOPS
     for whole in groups_of(sampled):
-        track = many or len(whole.rows) * len(gain) >= WORTH_TRACKING
         for start in range(0, len(whole.rows), pairs):
             part = slice(start, start + pairs)
             group = Group(whole.delay, whole.rows[part], whole.columns[part])
-            solved = solve(sampled, compensator, group, steps, track)
+            solved = solve(sampled, compensator, group, steps, whole.delay in tracked)
             reduction.add(group, solved, sampled.period[group.rows, group.columns])
     return reduction.result()
 

@@ -69,7 +69,7 @@ class Job:
         self.lanes = [
             np.ascontiguousarray(part.reshape(blocks, LANES, -1).transpose(0, 2, 1)) for part in (constant, slope)
         ]
-        self.reductions = np.zeros((blocks, len(GAIN), REDUCTIONS, LANES))
+        self.reductions = np.zeros((REDUCTIONS, blocks, len(GAIN), LANES))
         self.marks, self.kernel = np.zeros((blocks, len(GAIN), LANES)), tracker(degree)
 
     def run(self) -> Job:
@@ -130,6 +130,6 @@ def _agreeing(answers: Mapping[str, Any]) -> None:
     reductions, marks, roots = answers["kernel"].reductions, answers["kernel"].marks, answers["bare"]
     radius = np.abs(1 + roots).max(axis=-1).reshape(-1, LANES, len(GAIN)).transpose(0, 2, 1)
     sure = marks == 1.0
-    difference = np.abs(np.exp(reductions[:, :, 0]) - radius)[sure] / radius[sure]
+    difference = np.abs(np.exp(reductions[0]) - radius)[sure] / radius[sure]
     if difference.max() > 1e-6:  # nearly double roots move by the square root of rounding
         raise RuntimeError(f"spectral radii differ by {difference.max():.1e}")
