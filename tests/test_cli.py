@@ -265,9 +265,9 @@ def test_an_interrupted_sweep_goes_on_to_the_same_numbers(tmp_path, monkeypatch)
 def only_others(compute, finished):
     """compute, which fails when it is asked for a finished tile again."""
 
-    def checked(study, scenarios, tile, tracked):
+    def checked(study, scenarios, tile, alike):
         assert tile.number not in finished
-        return compute(study, scenarios, tile, tracked)
+        return compute(study, scenarios, tile, alike)
 
     return checked
 

@@ -42,9 +42,9 @@ def counted(monkeypatch):
     """The numbers of the tiles computed from here on."""
     numbers: list[int] = []
 
-    def compute_and_count(study, scenarios, tile, tracked):
+    def compute_and_count(study, scenarios, tile, alike):
         numbers.append(tile.number)
-        return compute(study, scenarios, tile, tracked)
+        return compute(study, scenarios, tile, alike)
 
     monkeypatch.setattr(running, "compute", compute_and_count)
     return numbers
@@ -98,7 +98,7 @@ def test_another_study_in_the_same_folder_is_not_taken_for_this_one(tmp_path):
 
 def test_no_damage_to_a_tile_goes_unseen(tmp_path):
     study = study_of(gain="{ values = [1.0] }", period="{ values = [0.1] }")
-    result, store = compute(study, scenarios_of(study), Tile(0, 0, 0, 1), frozenset()), TileStore(tmp_path, "key")
+    result, store = compute(study, scenarios_of(study), Tile(0, 0, 0, 1), {0: 3}), TileStore(tmp_path, "key")
     store.put(0, result)
     (file,) = tmp_path.glob("tiles-key/*")
     whole = file.read_bytes()
@@ -115,7 +115,7 @@ def test_no_damage_to_a_tile_goes_unseen(tmp_path):
 def test_a_header_that_asks_for_less_does_not_hide_the_rest(tmp_path):
     # numpy reads as much as the header says, and a long array never comes to the checksum at its end
     study = study_of(gain="{ values = [1.0] }", period="{ values = [0.1] }")
-    result = compute(study, scenarios_of(study), Tile(0, 0, 0, 1), frozenset())
+    result = compute(study, scenarios_of(study), Tile(0, 0, 0, 1), {0: 3})
     store = TileStore(tmp_path, "key")
     store.put(0, dataclasses.replace(result, nominal=np.zeros((1, 1, 4000))))
     (file,) = tmp_path.glob("tiles-key/*")

@@ -15,7 +15,7 @@ from explorer.sweeping import tiles
 from explorer.sweeping.dataset import Grid
 from explorer.sweeping.estimate import estimate
 from explorer.sweeping.scenarios import scenarios_of
-from explorer.sweeping.tiles import Tile, compute, tiles_of
+from explorer.sweeping.tiles import Tile, compute, loops_by_delay, tiles_of
 
 # 52 samples of dead time at 0.1 s nominally, 76 at half the tolerance, 100 at all of it: too many to solve
 TOO_LONG = {
@@ -154,7 +154,7 @@ def test_tiles_may_finish_in_any_order(many_tiles):
     study = study_of(**TOO_LONG | {"period": "{ values = [0.08, 0.09, 0.1, 2.0] }"})
     scenarios = scenarios_of(study)
     cut = [Tile(index, 0, index, index + 1) for index in range(4)]
-    results = [compute(study, scenarios, tile, frozenset()) for tile in cut]
+    results = [compute(study, scenarios, tile, loops_by_delay(study, scenarios)) for tile in cut]
     forward, backward = Grid(study, scenarios), Grid(study, scenarios)
     for tile, result in zip(cut, results, strict=True):
         forward.put(tile, result)

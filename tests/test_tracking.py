@@ -29,7 +29,7 @@ from explorer.kernels.restart import solve_afresh
 from explorer.kernels.roots import poles, reductions_of
 from explorer.kernels.tracking import REDUCTIONS, gain_steps, tracker
 from explorer.loop import solving
-from explorer.sweeping import tiles
+
 
 ROUNDING = 4e-16  # two roundings
 
@@ -262,8 +262,7 @@ LAGGING = {
 def test_a_tracked_sweep_equals_companion_eigenvalues(parts, monkeypatch):
     study = study_of(**LAGGING | parts)
     by_eigenvalues = explorer.sweep(study, jobs=1)
-    monkeypatch.setattr(tiles, "WORTH_TRACKING", 0)
-    monkeypatch.setattr(solving, "_FEW", 0)
+    monkeypatch.setattr(solving, "WORTH_TRACKING", 1)
     by_tracking = explorer.sweep(study, jobs=1)
     for name in ("worst_value", "nominal_value"):
         np.testing.assert_allclose(by_tracking[name], by_eigenvalues[name], rtol=1e-9)  # what is promised

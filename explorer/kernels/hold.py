@@ -140,10 +140,13 @@ def _add_response(
     Π_{i<=k}(x - roots_i); `running[j]` is row j brought to the denominator reached so far.
     """
     n = roots.shape[0]
-    if not np.any(start):  # nothing is held after its change when the dead time is whole
+    something = False
+    for k in range(n):
+        something |= start[k] != 0.0
+    if not something:  # nothing is held after its change when the dead time is whole
         return
-    product[:] = 0.0
-    product[0] = 1.0
+    for power in range(n + 1):
+        product[power] = 1.0 if power == 0 else 0.0
     for k in range(n):
         for power in range(n):
             value = start[k] * product[power]
@@ -200,8 +203,10 @@ def sample_with_hold(
     work = np.empty((4, n + 1, n + 1), np.complex128)
     rows = np.empty((6, n + 1), np.complex128)
     for scenario in range(scenarios):
-        augmented[1:, 0] = start[scenario]
-        augmented[1:, 1:] = state[scenario]
+        for i in range(n):
+            augmented[i + 1, 0] = start[scenario, i]
+            for j in range(n):
+                augmented[i + 1, j + 1] = state[scenario, i, j]
         for column in range(period.shape[1]):
             time = period[scenario, column]
             _held_input(augmented, time, advance[scenario, column], work, rows)
@@ -247,19 +252,13 @@ def _held_input(
 
     augmented : [[0, 0], [start, state]]; the first column of its exponential is the integral of exp(state t) start.
     """
-    size = augmented.shape[0]
     full, part, rest, spare = work[0], work[1], work[2], work[3]
-    early, late = rows[0], rows[1]
-    if advance == 0.0:
-        exponential_of_triangle(augmented, time, full, spare)
-        for i in range(1, size):
-            early[i], late[i] = full[i, 0], 0.0
-        return
-    exponential_of_triangle(augmented, advance, part, spare)
-    exponential_of_triangle(augmented, time - advance, rest, spare)
+    for piece in range(1, 3):  # one call in a loop, for what is called twice is compiled twice
+        exponential_of_triangle(augmented, advance if piece == 1 else time - advance, work[piece], spare)
     _multiply_triangles(part, rest, 1.0, full)
     _put_exact(augmented, time, full)
-    for i in range(1, size):
+    early, late = rows[0], rows[1]
+    for i in range(1, augmented.shape[0]):
         late[i], early[i] = part[i, 0], 0.0
         for j in range(1, i + 1):
             early[i] += part[i, j] * rest[j, 0]
@@ -282,8 +281,8 @@ def _transfer(
     """
     n = output.shape[0]
     roots, below, product, running = rows[2, :n], rows[3], rows[4], work[1]
-    below[:] = 0.0
-    below[0] = 1.0
+    for power in range(n + 1):
+        below[power] = 1.0 if power == 0 else 0.0
     for i in range(n):
         exponent = augmented[i + 1, i + 1] * time
         roots[i] = _exponential_minus_one(exponent) if variable == 0 else _exponential(exponent)
@@ -292,8 +291,8 @@ def _transfer(
     for power in range(n + 1):
         numerator[power] = 0.0
     step = work[0, 1:, 1:]
-    _add_response(step, roots, rows[0, 1:], output, 0, slope, numerator, running, product)
-    _add_response(step, roots, rows[1, 1:], output, 1, slope, numerator, running, product)
+    for shift in range(2):
+        _add_response(step, roots, rows[shift, 1:], output, shift, slope, numerator, running, product)
     for power in range(n + 1):
         denominator[n - power] = below[power].real
         numerator[n - power] += direct * below[power].real

@@ -75,13 +75,19 @@ def _real_roots(past: Array, first: int, degree: int, lane: int, roots: Array, s
         count, used = count + 1, used + 1
     for rest in range(used, degree):
         slots[rest] = -1
-    for i in range(1, count):
-        value, j = roots[i], i - 1
-        while j >= 0 and roots[j] < value:
-            roots[j + 1] = roots[j]
-            j -= 1
-        roots[j + 1] = value
+    _sort(roots, count)
     return count
+
+
+@compiled()
+def _sort(values: Array, count: int) -> None:
+    """The first `count` values descending, in place; numpy.sort takes seconds to compile."""
+    for i in range(1, count):
+        value, j = values[i], i - 1
+        while j >= 0 and values[j] < value:
+            values[j + 1] = values[j]
+            j -= 1
+        values[j + 1] = value
 
 
 @compiled()
@@ -212,7 +218,7 @@ def _group(roots: Array, lane: int, past: Array, here: int) -> None:
         if free[i]:
             reals[count] = roots[i].real
             count += 1
-    reals[:count] = np.sort(reals[:count])
+    _sort(reals, count)
     for k in range(0, count - 1, 2):
         past[here + row, lane], past[here + row + 1, lane] = -(reals[k] + reals[k + 1]), reals[k] * reals[k + 1]
         row += 2

@@ -23,7 +23,11 @@ Real = NDArray[np.float64]
 
 HIGHEST_TRACKED = 16
 _WORTH_A_SECOND_RUN = 0.01  # of a block's loops: companion eigenvalues cost hundreds of times a tracked loop
-_FEW = 5_000  # loops that companion eigenvalues solve while the tracking in z would still be compiled
+
+# Tracking is compiled for each degree and variable, for seconds on a new machine: not worth it for fewer loops of the
+# whole sweep. That depends on the study alone, so the numbers never depend on what is compiled already.
+WORTH_TRACKING = 120_000
+
 _LAPACK_AT_ONCE = 20_000  # polynomials, to bound memory
 
 
@@ -37,11 +41,11 @@ class Solved(NamedTuple):
     status: NDArray[np.int8]
 
 
-def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real, track: bool) -> Solved:
+def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real, alike: int) -> Solved:
     """Reductions of all poles of a group's loops at every gain.
 
-    steps : (G, 5) from kernels.tracking.gain_steps. track : whether the loops are many enough to be tracked, which
-    takes seconds of compiling for each degree on a new machine; without it all go through companion eigenvalues.
+    steps : (G, 5) from kernels.tracking.gain_steps. alike : how many loops of this delay the whole sweep has: few
+    ones all go through companion eigenvalues.
     """
     degree, pairs = degree_of(sampled, compensator, group.delay), len(group.rows)
     blocks, gain = -(-pairs // LANES), steps[:, 0]
@@ -52,14 +56,14 @@ def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real,
         return Solved(reductions, status)
     in_w = characteristic(sampled, compensator, group, variable=0)
     certificates = np.zeros((blocks, len(gain), LANES))  # none yet
-    track = track and 0 < degree <= HIGHEST_TRACKED
-    if track:
+    tracked = alike >= WORTH_TRACKING and 0 < degree <= HIGHEST_TRACKED
+    if tracked:
         constant, slope = (_in_lanes(part, blocks) for part in in_w)
         tracker(degree)(constant, slope, steps, reductions, certificates)
     if (certificates == 1.0).all():
         return Solved(reductions, status)
     in_z = characteristic(sampled, compensator, group, variable=1)
-    if track and (certificates != 1.0).sum() > _FEW:
+    if tracked and (certificates != 1.0).mean() * alike >= WORTH_TRACKING:
         _track_in_z(degree, in_z, steps, reductions, certificates)
     _solve_rest(in_w, in_z, gain, reductions, status, certificates)
     return Solved(reductions, status)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import resource
 import time
 from typing import NamedTuple
 
@@ -11,16 +12,17 @@ import numpy as np
 
 from explorer.study.model import Study
 from explorer.sweeping.scenarios import Scenarios, scenarios_of
-from explorer.sweeping.tiles import LOOPS_AT_ONCE, Tile, compute, loops_in, tiles_of
+from explorer.sweeping.tiles import LOOPS_AT_ONCE, Tile, compute, loops_by_delay, loops_in, tiles_of
 
-_TRIAL_LOOPS = 8_000
-_BYTES_PER_LOOP = (
-    2_500  # companion matrices, roots and certificates of one loop of order 6 while it is solved
-)
+_TRIAL_PERIODS, _TRIAL_SECONDS, _TRIAL_LOOPS = 12, 0.15, 400_000
+_SECOND_WORKER = 0.85  # of what one worker does alone: they share the interpreter and the memory, measured
+_WRITING = 40e6  # bytes of results per second into files, compressed, measured
+_LOADING = 0.7  # seconds for libraries and compiled kernels, measured
+_BYTES_PER_LOOP = 400  # reductions, certificates and measures of one loop while it is solved, and LAPACK's few
 
 
 class Estimate(NamedTuple):
-    """loops in all, seconds of sweeping, bytes beyond the program itself, tiles."""
+    """loops in all, seconds of sweeping, bytes the program takes at most in all, tiles."""
 
     loops: int
     seconds: float
@@ -31,25 +33,35 @@ class Estimate(NamedTuple):
 def estimate(study: Study) -> tuple[Scenarios, Estimate]:
     """The scenario table, and what the sweep will take; raises StudyError as the sweep would.
 
-    A few periods spread over the axis are solved twice, the second time with everything loaded and compiled.
+    A few periods spread over the axis are solved with ever more scenarios until that takes long enough to tell; the
+    first trial, which loads and compiles, does not count.
     """
     scenarios = scenarios_of(study)
     loops, tiles = loops_in(study, len(scenarios.scale)), tiles_of(study, len(scenarios.scale))
-    few = np.unique(np.linspace(0, len(study.period.values) - 1, 4).round().astype(int))
-    count = max(1, min(len(scenarios.scale), _TRIAL_LOOPS // (len(few) * len(study.gain.values))))
-    rows = np.unique(np.linspace(0, len(scenarios.scale) - 1, count).round().astype(int))
-    part = dataclasses.replace(
-        study, period=dataclasses.replace(study.period, values=study.period.values[few])
-    )
-    table = dataclasses.replace(scenarios, values=scenarios.values[rows], scale=scenarios.scale[rows])
-    seconds = 0.0
-    for _ in range(2):
-        start = time.perf_counter()
-        compute(part, table, Tile(0, 0, 0, len(few)), frozenset())
-        seconds = time.perf_counter() - start
     workers = min(joblib.cpu_count(), len(tiles))
     cells = loops // len(scenarios.scale)
     stored = cells * len(study.requirements) * (12 * len(study.scenarios.tolerance_scales) + 8)
+    together = 1 + _SECOND_WORKER * (workers - 1)
+    seconds = _seconds_per_loop(study, scenarios) * loops / together + stored / _WRITING + _LOADING
     at_once = min(loops, LOOPS_AT_ONCE) * _BYTES_PER_LOOP * workers
-    time_needed = seconds * loops / (len(rows) * len(few) * len(study.gain.values)) / workers
-    return scenarios, Estimate(loops, time_needed, 2 * stored + at_once, len(tiles))
+    now = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024
+    return scenarios, Estimate(loops, seconds, now + 4 * stored + at_once, len(tiles))  # results, verdict, copies
+
+
+def _seconds_per_loop(study: Study, scenarios: Scenarios) -> float:
+    """On one worker, once everything is compiled."""
+    length = len(study.period.values)
+    few = np.unique(((np.arange(_TRIAL_PERIODS) + 0.5) / _TRIAL_PERIODS * length).astype(int))
+    part = dataclasses.replace(study, period=dataclasses.replace(study.period, values=study.period.values[few]))
+    alike, each = loops_by_delay(study, scenarios), len(few) * len(study.gain.values)
+    count, known = 1, 0.0
+    while True:
+        rows = np.unique(np.linspace(0, len(scenarios.scale) - 1, count).round().astype(int))
+        table = dataclasses.replace(scenarios, values=scenarios.values[rows], scale=scenarios.scale[rows])
+        start = time.perf_counter()
+        compute(part, table, Tile(0, 0, 0, len(few)), alike)
+        seconds = time.perf_counter() - start
+        whole = len(rows) == len(scenarios.scale) or len(rows) * each >= _TRIAL_LOOPS
+        if known and (seconds > _TRIAL_SECONDS or whole):
+            return seconds / (len(rows) * each)
+        count, known = min(max(count * 4, 16), len(scenarios.scale)), seconds

@@ -18,7 +18,7 @@ from explorer.sweeping.dataset import Grid
 from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios, scenarios_of
 from explorer.sweeping.store import SWEEP_FILE, TileStore, owned, read_dataset, write_dataset
-from explorer.sweeping.tiles import Tile, compute, tiles_of, tracked_delays
+from explorer.sweeping.tiles import Tile, compute, loops_by_delay, tiles_of
 
 Progress = Callable[[int, int], None]  # tiles finished, tiles in all
 
@@ -123,10 +123,10 @@ def _computed(
 
     if not tiles:
         return
-    tracked = tracked_delays(study, scenarios)
+    alike = loops_by_delay(study, scenarios)
 
     def solve(tile: Tile) -> tuple[Tile, TileResult]:
-        return tile, compute(study, scenarios, tile, tracked)
+        return tile, compute(study, scenarios, tile, alike)
 
     if jobs == 1:
         yield from map(solve, tiles)

@@ -30,9 +30,6 @@ _DELAYS_AT_ONCE = 1_000_000
 LOOPS_IN_TILE = 2_000_000  # a fraction of a second of work, and what a killed run can lose
 LOOPS_AT_ONCE = 100_000  # bounds memory; half of it or double are slower
 
-# Tracking is compiled for each degree, a few seconds on a new machine: not worth it for fewer loops of one degree in
-# the whole sweep. That depends on the study alone, so the numbers never depend on what is compiled.
-WORTH_TRACKING = 50_000
 FEWEST_TILES, FEWEST_LOOPS = 8, 50_000  # tiles for the workers to share, unless they would be smaller than that
 
 
@@ -65,21 +62,21 @@ def design_values(study: Study, design: int) -> dict[str, float]:
     return {axis.name: float(axis.values[index]) for axis, index in zip(study.design, place, strict=True)}
 
 
-def tracked_delays(study: Study, scenarios: Scenarios) -> frozenset[int]:
-    """The whole-sample delays of which the sweep has loops enough to track their poles."""
+def loops_by_delay(study: Study, scenarios: Scenarios) -> dict[int, int]:
+    """How many loops of the whole sweep have each whole-sample delay, that is, one degree."""
     table, period, count = scenarios.by_name(), study.period.values, Counter[int]()
     step = max(1, _DELAYS_AT_ONCE // len(scenarios.scale))
     for start in range(0, len(period), step):
         delays, pairs = np.unique(delays_of(study, table, period[start : start + step])[1], return_counts=True)
         count.update(dict(zip(delays.tolist(), pairs.tolist(), strict=True)))
     each = loops_in(study, 1) // len(period)  # gains and designs of one pair of scenario and period
-    return frozenset(delay for delay, pairs in count.items() if pairs * each >= WORTH_TRACKING)
+    return {delay: pairs * each for delay, pairs in count.items()}
 
 
-def compute(study: Study, scenarios: Scenarios, tile: Tile, tracked: frozenset[int]) -> TileResult:
+def compute(study: Study, scenarios: Scenarios, tile: Tile, alike: dict[int, int]) -> TileResult:
     """Solve one tile.
 
-    tracked : from `tracked_delays`; loops of other delays are solved by companion eigenvalues.
+    alike : from `loops_by_delay`.
 
     Raises StudyError where an expression has no value somewhere on the axes or in the tolerance box.
     """
@@ -92,7 +89,7 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile, tracked: frozenset[i
         for start in range(0, len(whole.rows), pairs):
             part = slice(start, start + pairs)
             group = Group(whole.delay, whole.rows[part], whole.columns[part])
-            solved = solve(sampled, compensator, group, steps, whole.delay in tracked)
+            solved = solve(sampled, compensator, group, steps, alike[whole.delay])
             reduction.add(group, solved, sampled.period[group.rows, group.columns])
     return reduction.result()
 

@@ -42,21 +42,16 @@ def judge(dataset: xarray.Dataset, limits: Limits | None = None) -> xarray.Datas
     study = read_study(text=str(dataset.attrs["study"]))
     requirements = with_limits(study, limits or {})
     period = dataset[PERIOD].values
-    worst = np.stack([
-        slack_of(one, dataset["worst_value"].sel({MEASURE: one.name}).values, period) for one in requirements
-    ])  # fmt: skip
-    nominal = np.stack([
-        slack_of(one, dataset["nominal_value"].sel({MEASURE: one.name}).values, period) for one in requirements
-    ])  # fmt: skip
-    least = worst.min(axis=0)  # NaN wins, so one unsolved requirement makes the cell unknown
-    unknown = np.isnan(least)
+    slack, nominal = np.empty(dataset["worst_value"].shape), np.empty(dataset["nominal_value"].shape)
+    for index, one in enumerate(requirements):  # one after the other, for a long sweep fills the memory
+        slack[index] = slack_of(one, dataset["worst_value"].values[index], period)
+        nominal[index] = slack_of(one, dataset["nominal_value"].values[index], period)
+    least, binding = _least(slack)
     arrays = {
-        "slack": worst,
+        "slack": slack,
         "least_slack": least,
-        "binding": np.where(unknown, -1, np.where(np.isnan(worst), np.inf, worst).argmin(axis=0)).astype(
-            np.int32
-        ),
-        "feasible": ~unknown & (least >= 0),
+        "binding": binding,
+        "feasible": least >= 0,  # false for NaN
         "nominal_slack": nominal,
         "limit": np.stack([one.limits(period) for one in requirements]),
         "sense": np.array([one.sense for one in requirements], dtype=object),
@@ -109,6 +104,17 @@ def slack_of(requirement: Requirement, value: Real, period: Real) -> Real:
         return np.where(value == 1.0, -np.finfo(float).eps, 1.0 - value)
     difference = value - limit if requirement.sense == "at least" else limit - value
     return np.asarray(difference / scale)
+
+
+def _least(slack: Real) -> tuple[Real, NDArray[np.int32]]:
+    """Least slack over the requirements and which it is, NaN and -1 where one of them is unknown; slack : (R, ...)."""
+    least, binding = slack[0].copy(), np.zeros(slack.shape[1:], np.int32)
+    for index in range(1, len(slack)):
+        lower = slack[index] < least
+        binding[lower] = index
+        least = np.minimum(least, slack[index])  # NaN wins
+    binding[np.isnan(least)] = -1
+    return least, binding
 
 
 def _attributes(name: str) -> dict[str, Any]:
