@@ -78,9 +78,12 @@ def check(study: Path, as_data: bool) -> None:
 @STUDY
 @click.option("--out", metavar="DIR", help="Folder of the run [default: outputs/<stem of STUDY>].")
 @click.option("--jobs", type=int, default=-1, show_default=True, help="Worker threads; -1: one per core.")
+@click.option("--cluster", metavar="ADDRESS", help="Let the workers of a running Dask cluster compute the tiles.")
 @click.option("--fresh", is_flag=True, help="Start over instead of continuing or reusing a run.")
 @click.option("--strict", is_flag=True, help="Exit with status 1 when nothing is feasible.")
-def sweep(study: Path, out: str | None, jobs: int, fresh: bool, strict: bool) -> None:
+def sweep(
+    study: Path, out: str | None, jobs: int, cluster: str | None, fresh: bool, strict: bool
+) -> None:
     """Compute a study: writes sweep.nc, verdict.nc, decision.json and pictures, prints the answer."""
     from explorer import read_study
     from explorer import sweep as swept
@@ -91,7 +94,7 @@ def sweep(study: Path, out: str | None, jobs: int, fresh: bool, strict: bool) ->
     read = read_study(study)
     folder = Path("outputs") / study.stem if out is None else Path(out)
     with progress_line(read.title) as report:
-        dataset = swept(read, out=folder, jobs=jobs, fresh=fresh, progress=report)
+        dataset = swept(read, out=folder, jobs=jobs, fresh=fresh, progress=report, cluster=cluster)
     run = write_answer(folder, dataset)
     say(run.decision["answer"])
     click.echo(f"\nWritten to {folder}/: sweep.nc, verdict.nc, decision.json, region.png, slack.png")

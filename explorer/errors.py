@@ -45,6 +45,10 @@ class StudyError(ExplorerError):
             "\n".join([*(str(fault) for fault in self.faults), f"{count}; nothing was computed"])
         )
 
+    def __reduce__(self) -> tuple[type[StudyError], tuple[list[Fault]]]:
+        """From its faults, so that it can come from another process."""
+        return type(self), (self.faults,)
+
 
 class OptionError(ExplorerError):
     """An option or argument has a value that is not allowed; the message says which are."""

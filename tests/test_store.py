@@ -7,6 +7,9 @@ from __future__ import annotations
 
 import dataclasses
 import gc
+import subprocess
+import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -94,6 +97,52 @@ def test_another_study_in_the_same_folder_is_not_taken_for_this_one(tmp_path):
     assert not first.equals(explorer.sweep(other, out=tmp_path, jobs=1))
     interrupted(study_of(), tmp_path, after=1)
     assert same(explorer.sweep(other, jobs=1), explorer.sweep(other, out=tmp_path, jobs=1))
+
+
+def test_runs_killed_at_random_moments_go_on_to_the_same_bits(tmp_path):
+    words = [sys.executable, str(Path(__file__).with_name("killed_runs.py")), str(tmp_path), "50", "1"]
+    done = subprocess.run(words, capture_output=True, text=True, check=False)
+    assert done.returncode == 0, done.stderr
+    stopped, left = map(int, done.stdout.split())
+    assert stopped >= 25  # most were killed before their end
+    assert left >= 25  # and left tiles to go on from
+
+
+def test_tiles_of_another_study_are_kept_or_thrown_away_never_mixed(many_tiles, tmp_path):
+    study, other = study_of(**SPREAD), study_of(**SPREAD | {"gain": "{ values = [0.5, 1.3] }"})
+    interrupted(study, tmp_path, after=3)
+    with pytest.raises(RunError, match=r"holds 3 finished tiles .* --fresh throws them away"):
+        explorer.sweep(other, out=tmp_path, jobs=1)
+    assert len(list(tmp_path.glob("tiles-*/tile-*.npz"))) == 3
+    assert same(explorer.sweep(other, out=tmp_path, jobs=1, fresh=True), explorer.sweep(other, jobs=1))
+    assert not list(tmp_path.glob("tiles-*"))
+
+
+FULL = """
+import resource, sys
+import explorer
+from explorer.errors import IncompleteError
+from explorer.sweeping import tiles
+from small_study import SPREAD, study_of
+tiles.LOOPS_IN_TILE, tiles.FEWEST_LOOPS = 400, 1
+resource.setrlimit(resource.RLIMIT_FSIZE, (int(sys.argv[2]), -1))  # a disk that takes no larger file
+try:
+    explorer.sweep(study_of(**SPREAD), out=sys.argv[1], jobs=1)
+except IncompleteError as error:
+    print(error)
+"""
+
+
+@pytest.mark.parametrize(("size", "name"), [(100, "tile-"), (9_000, "sweep.nc")])
+def test_a_full_disk_is_said_and_loses_nothing(many_tiles, size, name, tmp_path):
+    words = [sys.executable, "-c", "import signal; signal.signal(signal.SIGXFSZ, signal.SIG_IGN)\n" + FULL]
+    done = subprocess.run([*words, str(tmp_path), str(size)], capture_output=True, text=True, check=True,
+                          cwd=Path(__file__).parent)  # fmt: skip
+    assert name in done.stdout
+    assert "what was finished before stays" in done.stdout
+    assert not list(tmp_path.glob("**/*.part"))
+    study = study_of(**SPREAD)
+    assert same(explorer.sweep(study, out=tmp_path, jobs=1), explorer.sweep(study, jobs=1))
 
 
 def test_no_damage_to_a_tile_goes_unseen(tmp_path):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import hashlib
 import warnings
 from collections.abc import Callable, Iterator
@@ -14,6 +15,7 @@ import explorer
 from explorer.errors import OptionError, RunError
 from explorer.names import SWEEP
 from explorer.study.model import Study
+from explorer.sweeping.cluster import computed_on_cluster
 from explorer.sweeping.dataset import Grid
 from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios, scenarios_of
@@ -21,6 +23,7 @@ from explorer.sweeping.store import SWEEP_FILE, TileStore, owned, read_dataset, 
 from explorer.sweeping.tiles import Tile, compute, loops_by_delay, tiles_of
 
 Progress = Callable[[int, int], None]  # tiles finished, tiles in all
+Work = Callable[[list[Tile]], Iterator[tuple[Tile, TileResult]]]  # tiles in, their results as they finish out
 
 
 def sweep(
@@ -29,6 +32,7 @@ def sweep(
     jobs: int = -1,
     fresh: bool = False,
     progress: Progress | None = None,
+    cluster: str | None = None,
 ) -> xarray.Dataset:
     """Sweep a study over gain, period, further design variables and scenarios.
 
@@ -38,20 +42,23 @@ def sweep(
     jobs : worker threads, -1 for one per core; the numbers do not depend on it.
     fresh : start over although a run of this study is there.
     progress : called after every tile.
+    cluster : address of the scheduler of a running Dask cluster to compute the tiles instead; needs the extra `cluster`.
 
     Raises
     ------
-    StudyError : an expression has no value somewhere on the axes; RunError : the folder cannot be used.
+    StudyError : an expression has no value somewhere on the axes; RunError : the folder or the cluster cannot be used;
+    IncompleteError : some tiles could not be computed or written, the others stay in the folder.
     """
     if jobs != -1 and jobs < 1:
         raise OptionError(f"jobs: found {jobs}; allowed: 1 or more, or -1 for one per core")
     scenarios = scenarios_of(study)
     tiles = tiles_of(study, len(scenarios.scale))
+    work = functools.partial(_computed, study, scenarios, jobs=jobs, cluster=cluster)
     if out is None:
-        return _in_memory(study, scenarios, tiles, jobs, progress)
+        return _in_memory(study, scenarios, tiles, work, progress)
     folder = Path(out)
     with owned(folder):
-        return _in_folder(study, scenarios, tiles, folder, jobs, fresh, progress)
+        return _in_folder(study, scenarios, tiles, folder, work, fresh, progress)
 
 
 def run_key(study: Study) -> str:
@@ -60,10 +67,10 @@ def run_key(study: Study) -> str:
 
 
 def _in_memory(
-    study: Study, scenarios: Scenarios, tiles: list[Tile], jobs: int, progress: Progress | None
+    study: Study, scenarios: Scenarios, tiles: list[Tile], work: Work, progress: Progress | None
 ) -> xarray.Dataset:
     grid = Grid(study, scenarios)
-    for done, (tile, result) in enumerate(_computed(study, scenarios, tiles, jobs), 1):
+    for done, (tile, result) in enumerate(work(tiles), 1):
         grid.put(tile, result)
         if progress:
             progress(done, len(tiles))
@@ -75,15 +82,17 @@ def _in_folder(
     scenarios: Scenarios,
     tiles: list[Tile],
     folder: Path,
-    jobs: int,
+    work: Work,
     fresh: bool,
     progress: Progress | None,
 ) -> xarray.Dataset:
     store, file = TileStore(folder, run_key(study)), folder / SWEEP_FILE
     if fresh:
-        store.clear()
+        store.clear_all()
     elif (known := _finished(study, file)) is not None:
+        store.clear()  # a run killed at its very end leaves them
         return known
+    store.refuse_others()
     grid = Grid(study, scenarios)
     missing = []
     for tile in tiles:
@@ -92,9 +101,7 @@ def _in_folder(
             missing.append(tile)
         else:
             grid.put(tile, stored)
-    for done, (tile, result) in enumerate(
-        _computed(study, scenarios, missing, jobs), len(tiles) - len(missing) + 1
-    ):
+    for done, (tile, result) in enumerate(work(missing), len(tiles) - len(missing) + 1):
         store.put(tile.number, result)
         grid.put(tile, result)
         if progress:
@@ -117,11 +124,13 @@ def _finished(study: Study, file: Path) -> xarray.Dataset | None:
 
 
 def _computed(
-    study: Study, scenarios: Scenarios, tiles: list[Tile], jobs: int
+    study: Study, scenarios: Scenarios, tiles: list[Tile], jobs: int, cluster: str | None
 ) -> Iterator[tuple[Tile, TileResult]]:
     """Tiles as they finish. Threads: LAPACK and the kernels release the interpreter, and nothing is copied."""
-
     if not tiles:
+        return
+    if cluster is not None:
+        yield from computed_on_cluster(study, tiles, cluster)
         return
     alike = loops_by_delay(study, scenarios)
 

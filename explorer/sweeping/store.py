@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 import xarray
 
-from explorer.errors import RunError
+from explorer.errors import IncompleteError, RunError
 from explorer.sweeping.reduction import TileResult
 
 SWEEP_FILE, VERDICT_FILE, DECISION_FILE = "sweep.nc", "verdict.nc", "decision.json"
@@ -69,16 +69,30 @@ class TileStore:
         except (OSError, ValueError, KeyError, EOFError, RuntimeError, zipfile.BadZipFile):
             return None
 
+    def refuse_others(self) -> None:
+        """RunError where tiles of another study, seed or version lie in the folder: they would be lost, never mixed."""
+        others = [tile for tile in self.folder.parent.glob("tiles-*/tile-*.npz") if tile.parent != self.folder]
+        if others:
+            raise RunError(
+                f"{self.folder.parent}: holds {len(others)} finished tiles of a run that was stopped, of another study, "
+                "seed or version of explorer. --fresh throws them away; --out keeps them and writes elsewhere."
+            )
+
     def clear(self) -> None:
         """Remove the tiles of this run."""
         shutil.rmtree(self.folder, ignore_errors=True)
+
+    def clear_all(self) -> None:
+        """Remove the tiles of other studies and versions too."""
+        for folder in self.folder.parent.glob("tiles-*"):
+            shutil.rmtree(folder, ignore_errors=True)
 
     def _file(self, number: int) -> Path:
         return self.folder / f"tile-{number:06d}.npz"
 
 
-def write_whole(path: Path, content: bytes) -> None:
-    """Write a file so that it is there whole or not at all; RunError when the disk refuses."""
+def write_whole(path: Path, content: bytes | memoryview) -> None:
+    """Write a file so that it is there whole or not at all; IncompleteError when the disk refuses."""
     part = path.with_name(path.name + ".part")
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
@@ -90,29 +104,22 @@ def write_whole(path: Path, content: bytes) -> None:
     except OSError as error:
         with contextlib.suppress(OSError):
             part.unlink()
-        raise RunError(
+        raise IncompleteError(
             f"{path}: cannot be written: {error.strerror}; what was finished before stays"
         ) from None
 
 
 def write_dataset(dataset: xarray.Dataset, path: Path) -> None:
-    """Write a Dataset as netCDF-4, compressed, whole or not at all."""
+    """Write a Dataset as netCDF-4, compressed, whole or not at all; IncompleteError when the disk refuses.
+
+    Made in memory first: the HDF5 library brings the process down when the disk is full.
+    """
     encoding = {
         name: {"zlib": True, "complevel": 1}
         for name, array in dataset.data_vars.items()
         if array.dtype.kind in "fiub"
     }
-    part = path.with_name(path.name + ".part")
-    try:
-        path.parent.mkdir(parents=True, exist_ok=True)
-        dataset.to_netcdf(part, engine="h5netcdf", encoding=encoding)
-        with part.open("rb+") as stream:
-            os.fsync(stream.fileno())
-        os.replace(part, path)
-    except OSError as error:
-        with contextlib.suppress(OSError):
-            part.unlink()
-        raise RunError(f"{path}: cannot be written: {error.strerror or error}") from None
+    write_whole(path, dataset.to_netcdf(engine="h5netcdf", encoding=encoding))
 
 
 def read_dataset(path: Path) -> xarray.Dataset:
