@@ -12,6 +12,7 @@ import pytest
 from carriage import CARRIAGE, COMPENSATOR, IN_S, SENSOR, TRANSFER, changed
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from small_study import study_of
 
 import explorer
 from explorer.errors import StudyError
@@ -208,3 +209,11 @@ def test_a_damaged_study_is_read_or_refused_and_nothing_else(place, length, put)
         explorer.read_study(text=CARRIAGE[:place] + put + CARRIAGE[place + length :])
     except StudyError as error:
         assert error.faults
+
+
+def test_a_clock_may_not_run_backwards_at_any_tolerance_scale():
+    with pytest.raises(StudyError, match=r"the clock's tolerance times 2.5; allowed: tolerance scales at which every"):
+        study_of(
+            loop='clock_tolerance = "40 %"',
+            scenarios="{ interior = 0, corners = true, seed = 1, tolerance_scales = [1.0, 2.5] }",
+        )

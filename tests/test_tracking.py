@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import math
+import os
+import subprocess
+import sys
 
 import mpmath
 import numpy as np
@@ -29,7 +32,6 @@ from explorer.kernels.restart import solve_afresh
 from explorer.kernels.roots import poles, reductions_of
 from explorer.kernels.tracking import REDUCTIONS, gain_steps, tracker
 from explorer.loop import solving
-
 
 ROUNDING = 4e-16  # two roundings
 
@@ -216,6 +218,30 @@ def test_reductions_in_z_equal_those_in_w(degree):
     assert track(shifted, np.zeros_like(made), np.array([1.0]), in_z=True)[0] == pytest.approx(
         in_w, rel=1e-8, abs=1e-10
     )
+
+
+INTERPRETED = """
+import sys
+import numpy as np
+from explorer.kernels.tracking import REDUCTIONS, gain_steps, tracker
+generator = np.random.default_rng(4)
+gains = np.geomspace(0.1, 100.0, 9)
+constant = np.stack([np.poly(-generator.uniform(0.05, 0.8, 5)) for _ in range(16)]).T[None].copy()
+slope = np.concatenate([np.zeros((1, 1, 16)), 0.01 * generator.uniform(size=(1, 5, 16))], axis=1)
+found, marks = np.empty((REDUCTIONS, 1, 9, 16)), np.empty((1, 9, 16))
+tracker(5)(constant, slope, gain_steps(gains), found, marks)
+assert (marks == 1).all()
+np.save(sys.argv[1], found)
+"""
+
+
+def test_tracking_gives_the_same_without_a_compiler(tmp_path):
+    results = []
+    for disabled in ("0", "1"):
+        words = [sys.executable, "-c", INTERPRETED, str(tmp_path / disabled)]
+        subprocess.run(words, env=os.environ | {"NUMBA_DISABLE_JIT": disabled}, check=True)
+        results.append(np.load(tmp_path / f"{disabled}.npy"))
+    assert results[1] == pytest.approx(results[0], rel=1e-10)  # products and sums fuse where they are compiled
 
 
 def test_codes_of_both_variables_differ():

@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 from llvmlite import ir
-from numba.core import types
+from numba.core import config, types
 from numba.core.errors import RequireLiteralValue
 from numba.extending import intrinsic
 
@@ -184,13 +184,16 @@ class ArrayOperations:
 
 
 def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
-    """A function (degree, source, row, …, target, row, apart) for compiled kernels: target rows = formula(…, *source rows).
+    """A function (degree, source, row, …, target, row, apart) for compiled kernels: target rows = formula(…, source rows).
 
     degree : a literal while numba compiles, so each degree has instructions of its own. Then one pair per entry of
     inputs(degree): a C array and the row to read from; an entry is how many rows of LANES numbers, or, negative, how
     many single numbers of a 2-D array's row, the same in every lane. Last the target, its first row and how far the
     next ones are apart; it must not overlap a source. Returns how many lanes of the last result row are 1.
     """
+
+    if config.DISABLE_JIT:
+        return _interpreted(formula, inputs)
 
     @_intrinsic
     def run(typingctx: Any, degree: Any, arguments: Any) -> Any:
@@ -215,6 +218,23 @@ def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
             return _count_ones(builder, results[-1])
 
         return types.int64(degree, arguments), codegen
+
+    return run
+
+
+def _interpreted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
+    """The same function without a compiler, over NumPy arrays."""
+
+    def run(degree: int, arguments: tuple[Any, ...]) -> int:
+        *sources, target, row, apart = arguments
+        rows: list[Any] = []
+        for array, first, size in zip(sources[::2], sources[1::2], inputs(degree), strict=True):
+            rows += list(array[first : first + size]) if size > 0 else list(array[first, :-size])
+        with np.errstate(all="ignore"):
+            results = formula(ArrayOperations, degree, *rows)
+        for index, result in enumerate(results):
+            target[row + index * apart] = result
+        return int((results[-1] == 1.0).sum())
 
     return run
 

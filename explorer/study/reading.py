@@ -151,6 +151,9 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
         times = {name.name for name in names_in(plant.dead_time)} if plant.dead_time and known_time else set()
         parameter_bounds(collector, parameters, max(scenarios.tolerance_scales), times, period)
         check_size(collector, axes, parameters, scenarios)
+    if scenarios and loop and loop.clock_tolerance * max(scenarios.tolerance_scales) >= 1:
+        collector.fault(("sweep", "scenarios"), f"the clock's tolerance times {max(scenarios.tolerance_scales):g}",
+                        "allowed: tolerance scales at which every sample period stays above 0")  # fmt: skip
     if plant or loop:
         try_values(collector, plant, loop, parameters, axes, scenarios.tolerance_scales if scenarios else (1.0,))
     if not (top and plant and loop and scenarios and "gain" in axes and "period" in axes):

@@ -28,7 +28,7 @@ def computed_on_cluster(study: Study, tiles: list[Tile], address: str) -> Iterat
     Raises
     ------
     OptionError : the extra is not installed or the address is none. RunError : nobody answers there, there is no
-        worker, or one has other versions. IncompleteError, after all others : tiles that killed every worker they ran on.
+        worker, or one has other versions. IncompleteError, after all others : tiles that killed all their workers.
     """
     distributed = _distributed()
     try:
@@ -36,7 +36,8 @@ def computed_on_cluster(study: Study, tiles: list[Tile], address: str) -> Iterat
     except (OSError, TimeoutError) as error:
         raise RunError(f"--cluster: no scheduler answers at {address} ({error or 'no answer'})") from None
     except ValueError as error:
-        raise OptionError(f"--cluster: found {address!r}; allowed: tcp://HOST:PORT or tls://HOST:PORT ({error})") from None
+        allowed = "allowed: tcp://HOST:PORT or tls://HOST:PORT"
+        raise OptionError(f"--cluster: found {address!r}; {allowed} ({error})") from None
     with client:
         _check_workers(client, address)
         yield from _finished(distributed, client, study, tiles)
@@ -69,7 +70,8 @@ def _check_workers(client: Any, address: str) -> None:
     found = client.run(versions, on_error="return")
     problems = [f"{worker}: {_difference(answer)}" for worker, answer in found.items() if answer != versions()]
     if problems:
-        raise RunError("--cluster: workers must have what this machine has, or their numbers differ:\n" + "\n".join(problems))
+        rule = "--cluster: workers must have what this machine has, or their numbers differ:"
+        raise RunError("\n".join([rule, *problems]))
 
 
 def _difference(answer: Any) -> str:

@@ -42,7 +42,7 @@ def sweep(
     jobs : worker threads, -1 for one per core; the numbers do not depend on it.
     fresh : start over although a run of this study is there.
     progress : called after every tile.
-    cluster : address of the scheduler of a running Dask cluster to compute the tiles instead; needs the extra `cluster`.
+    cluster : address of the scheduler of a running Dask cluster that computes the tiles; needs the extra `cluster`.
 
     Raises
     ------

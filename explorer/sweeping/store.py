@@ -74,8 +74,8 @@ class TileStore:
         others = [tile for tile in self.folder.parent.glob("tiles-*/tile-*.npz") if tile.parent != self.folder]
         if others:
             raise RunError(
-                f"{self.folder.parent}: holds {len(others)} finished tiles of a run that was stopped, of another study, "
-                "seed or version of explorer. --fresh throws them away; --out keeps them and writes elsewhere."
+                f"{self.folder.parent}: holds {len(others)} finished tiles of a run that was stopped, of another "
+                "study, seed or version of explorer. --fresh throws them away; --out keeps them and writes elsewhere."
             )
 
     def clear(self) -> None:
