@@ -184,7 +184,7 @@ class ArrayOperations:
 
 
 def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
-    """A function (degree, source, row, …, target, row, apart) for compiled kernels: target rows = formula(…, source rows).
+    """A function (degree, source, row, …, target, row, apart) for kernels: target rows = formula(…, source rows).
 
     degree : a literal while numba compiles, so each degree has instructions of its own. Then one pair per entry of
     inputs(degree): a C array and the row to read from; an entry is how many rows of LANES numbers, or, negative, how
