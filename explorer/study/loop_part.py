@@ -13,6 +13,7 @@ from explorer.study.quantities import Dimension, QuantityError, read_quantity
 from explorer.study.schema import LoopSection, shown
 
 CONVERSIONS = ("backward difference", "bilinear", "matched poles and zeros", "bilinear, exact at")
+MOST_BITS = 24  # word length of coefficients: beyond that doubles could not shift them to w exactly
 _RULES = '"backward difference", "bilinear", "matched poles and zeros" or "bilinear, exact at 12 Hz"'
 
 
@@ -54,6 +55,9 @@ def read_loop(
     if not depends_on(compensator, "gain"):
         collector.fault(("loop", "compensator"), f"found {shown(section.compensator)} without gain",
                         "the swept gain must stand in the compensator", "Write gain*(...).")  # fmt: skip
+    bits = section.coefficient_bits or 0
+    if section.coefficient_bits is not None and not 2 <= bits <= MOST_BITS:
+        collector.fault(("loop", "coefficient_bits"), f"found {bits}", f"allowed: 2 to {MOST_BITS}, or left out")
     return Loop(
         compensator,
         str(section.compensator),
@@ -64,6 +68,7 @@ def read_loop(
         str(section.sensor),
         clock,
         execution,
+        bits,
     )
 
 

@@ -23,6 +23,8 @@ class Measure:
     better : "less" or "more", the direction in which a design improves; the worst scenario is the other end.
     takes_limit : False for stability, whose limit 1 is part of its definition.
     band : default band for measures that have one, else None; in_samples : a limit may count samples.
+    family : what it is computed from, "poles", "response", "frequency" or "hardware"; unit : "" where it is that of the
+    plant's output or input. inputs : references it may be asked for; needs : keys of [loop] it cannot do without.
     """
 
     name: str
@@ -34,6 +36,9 @@ class Measure:
     takes_limit: bool = True
     band: float | None = None
     in_samples: bool = False
+    family: str = "poles"
+    inputs: tuple[str, ...] = ()
+    needs: tuple[str, ...] = ()
 
     @property
     def key(self) -> str:
@@ -104,6 +109,7 @@ class Loop:
     """Everything around the plant. conversion : "" for a compensator in z; exact_at [rad/s] for the bilinear one.
 
     sensor : transfer in s or None; clock_tolerance : relative; execution_time : s or NaN when not stated.
+    coefficient_bits : word length of the compensator's coefficients, 0 for exact ones.
     """
 
     compensator: Node
@@ -115,6 +121,7 @@ class Loop:
     sensor_text: str
     clock_tolerance: float
     execution_time: float
+    coefficient_bits: int = 0
 
 
 @dataclass(frozen=True)
@@ -131,7 +138,8 @@ class ScenarioPlan:
 class Requirement:
     """One requirement: limit in the measure's unit, or in samples; scale divides the slack.
 
-    limit : NaN for stability; sense : "at least", "at most" or "below"; band : settling band or NaN.
+    limit : NaN for stability; sense : "at least", "at most" or "below"; band : settling band or NaN;
+    reference : "step" or "ramp" where the measure knows both, else ""; unit : of its values and limit, "" when none.
     """
 
     name: str
@@ -141,6 +149,8 @@ class Requirement:
     in_samples: bool
     scale: float
     band: float
+    reference: str = ""
+    unit: str = ""
 
     def limits(self, period: NDArray[np.float64]) -> NDArray[np.float64]:
         """The limit at each sample period, in the measure's unit (1 for stability)."""

@@ -142,7 +142,7 @@ def _study(collector: Collector, data: dict[str, Any], catalogue: Sequence[Measu
     if loop_table is not None and (section := collector.section(LoopSection, loop_table, ("loop",))):
         names = [*dimensions, *variables]
         loop = read_loop(collector, section, names, list(dimensions), time_unit, sampled_at is not None)
-    requirements = read_requirements(collector, spelt.get("requirements"), catalogue, time_unit)
+    requirements = read_requirements(collector, spelt.get("requirements"), catalogue, time_unit, list(loop_table or {}))
     if plant and loop:
         check_units(collector, plant, loop, dimensions, variables)
         _check_together(collector, plant, loop, axes)

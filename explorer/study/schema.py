@@ -142,6 +142,7 @@ class LoopSection(_Section):
     sensor: Scalar = 1
     clock_tolerance: Scalar = 0
     execution_time: Scalar | None = None
+    coefficient_bits: Whole | None = None
 
 
 class AxisSection(_Section):
@@ -173,6 +174,7 @@ class RequirementSection(_Section):
     at_most: Scalar | None = None
     scale: Scalar | None = None
     band: Scalar | None = None
+    input: Text | None = None
 
 
 Section = TypeVar("Section", bound=BaseModel)

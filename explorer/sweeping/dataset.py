@@ -14,7 +14,6 @@ from explorer.kernels.roots import SOLVED, STATUS_MEANING
 from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE, SCENARIO, SWEEP, dims_of
 from explorer.study.display import format_shown
 from explorer.study.model import Axis, Study
-from explorer.study.requirement_part import unit_in
 from explorer.sweeping.reduction import TileResult
 from explorer.sweeping.scenarios import Scenarios
 from explorer.sweeping.tiles import Tile
@@ -74,7 +73,7 @@ class Grid:
             MEASURE: _text([one.name for one in requirements]),
             "measure_kind": (MEASURE, _text([one.measure.key for one in requirements]), _attributes("measure_kind")),
             "measure_unit": (
-                MEASURE, _text([unit_in(one.measure, study.time_unit) for one in requirements]),
+                MEASURE, _text([one.unit for one in requirements]),
                 _attributes("measure_unit"),
             ),
             SCALE: (SCALE, np.array(study.scenarios.tolerance_scales), {"units": "1", "long_name": "scale"}),

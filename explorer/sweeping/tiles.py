@@ -18,6 +18,7 @@ from explorer.loop.closing import Group, Sampled, groups_of
 from explorer.loop.compensator import Compensator, compensator_on_axes
 from explorer.loop.sampling import delays_of, sample
 from explorer.loop.solving import solve
+from explorer.loop.word_length import rounded
 from explorer.study.expressions import ExpressionError
 from explorer.study.model import Study
 from explorer.study.reading import fault_in
@@ -97,9 +98,11 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile, alike: dict[int, int
 def _compensator(study: Study, design: dict[str, float], period: Real) -> Compensator:
     values = {parameter.name: parameter.nominal for parameter in study.parameters} | design
     try:
-        return compensator_on_axes(study.loop, values, study.gain.values, period)
+        exact = compensator_on_axes(study.loop, values, study.gain.values, period)
     except ExpressionError as error:
         raise fault_in(study, ("loop", "compensator"), study.loop.text, error) from None
+    bits = study.loop.coefficient_bits
+    return rounded(exact, study.gain.values, bits) if bits else exact
 
 
 def _sampled(study: Study, table: dict[str, Real], period: Real) -> Sampled:

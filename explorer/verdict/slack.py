@@ -17,7 +17,7 @@ from explorer.names import MEASURE, PARAMETER, PERIOD, VERDICT, dims_of
 from explorer.study.collect import Collector
 from explorer.study.expressions import closest
 from explorer.study.model import Requirement, Study
-from explorer.study.requirement_part import read_limit, unit_in
+from explorer.study.requirement_part import read_limit
 
 Real = NDArray[np.float64]
 Limits = Mapping[str, str | int | float]
@@ -62,7 +62,7 @@ def judge(dataset: xarray.Dataset, limits: Limits | None = None) -> xarray.Datas
         name: (dims_of(VERDICT[name], others), array, _attributes(name)) for name, array in arrays.items()
     }
     coordinates = {name: value for name, value in dataset.coords.items() if PARAMETER not in value.dims}
-    attributes = dict(dataset.attrs) | {"limits": _stated(requirements, study.time_unit)}
+    attributes = dict(dataset.attrs) | {"limits": _stated(requirements)}
     return xarray.Dataset(variables, coordinates, attributes)
 
 
@@ -82,7 +82,7 @@ def with_limits(study: Study, limits: Limits) -> tuple[Requirement, ...]:
             problems.append(f"{one.name!r} takes no limit: it is met when the largest |z| is below 1")
             continue
         collector = Collector("", "")
-        found = read_limit(collector, limits[one.name], ("limit", one.name), one.measure, study.time_unit)
+        found = read_limit(collector, limits[one.name], ("limit", one.name), one.measure, one.unit)
         if found is None:
             problems += [str(fault).removeprefix(": ") for fault in collector.faults]
         elif found[0] == 0 and math.isnan(one.scale):
@@ -122,11 +122,11 @@ def _attributes(name: str) -> dict[str, Any]:
     return {"long_name": stored.meaning} | ({"units": stored.unit} if stored.unit else {})
 
 
-def _stated(requirements: tuple[Requirement, ...], time_unit: str) -> str:
+def _stated(requirements: tuple[Requirement, ...]) -> str:
     """The limits judged by, one per line, as provenance."""
     lines = []
     for one in requirements:
-        unit = "samples" if one.in_samples else unit_in(one.measure, time_unit)
+        unit = "samples" if one.in_samples else one.unit
         limit = "1" if one.sense == "below" else f"{one.limit:.12g} {unit}".removesuffix(" 1")
         lines.append(f"{one.name}: {one.sense} {limit}")
     return "\n".join(lines)

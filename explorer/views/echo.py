@@ -16,7 +16,6 @@ from explorer.study.expressions import ExpressionError
 from explorer.study.model import Axis, Requirement, Study
 from explorer.study.quantities import format_quantity
 from explorer.study.reading import fault_in
-from explorer.study.requirement_part import unit_in
 from explorer.sweeping.estimate import Estimate
 from explorer.sweeping.scenarios import Scenarios
 
@@ -56,7 +55,7 @@ def understood(study: Study, scenarios: Scenarios, needed: Estimate) -> dict[str
         "requirements": [
             {"name": one.name, "measure": one.measure.key, "sense": one.sense,
              "limit": None if one.sense == "below" else one.limit,
-             "unit": "samples" if one.in_samples else unit_in(one.measure, study.time_unit)}
+             "unit": "samples" if one.in_samples else one.unit}
             for one in study.requirements
         ],
         "scenarios": {
@@ -187,7 +186,7 @@ def _axis(axis: Axis) -> str:
 def _requirement(study: Study, one: Requirement) -> str:
     if one.sense == "below":
         return f"{one.name}: every pole inside the unit circle"
-    unit = "sample" if one.in_samples else unit_in(one.measure, study.time_unit)
+    unit = "sample" if one.in_samples else one.unit
     return f"{one.name}: {one.measure.key} {one.sense} {format_quantity(one.limit, unit)}"
 
 
