@@ -14,10 +14,11 @@ _HOMES = {
     "read_study": "explorer.measures.asking",
     "sweep": "explorer.sweeping.running",
     "judge": "explorer.verdict.slack",
+    "probe": "explorer.sweeping.probing",
     "decide": "explorer.verdict.decisions",
 }
 
-__all__ = ["__version__", "decide", "judge", "read_study", "sweep"]
+__all__ = ["__version__", "decide", "judge", "probe", "read_study", "sweep"]
 
 
 def __getattr__(name: str) -> Any:

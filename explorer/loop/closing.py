@@ -1,4 +1,4 @@
-"""Closing the loop: a sampled plant and a compensator in, characteristic polynomials for solving out.
+"""Closing the loop: a sampled plant and a compensator in, open-loop and characteristic polynomials out.
 
 The coefficients are formed here and nowhere else: a(w)·(1 + w)^d·c(w) + b(w)·e(w) for the plant b/(a z^d) and
 the compensator e/c, as a function of gain, period and parameters.
@@ -72,6 +72,33 @@ def characteristic(
         constant = _sum(open_loop, _product(above, over))
         return constant, np.zeros_like(constant)
     return _sum(open_loop, _product(above, over[:, :1])), _sum(0 * open_loop, _product(above, over[:, 1:]))
+
+
+class OpenLoop(NamedTuple):
+    """The loop transfer L = (fixed + gain * sloped)/(below z**delay) of M pairs, in w, descending powers.
+
+    below : (M, 1 or G, n+1); fixed, sloped : (M, 1 or G, n+1), with G own polynomials per gain and sloped 0 when the
+    compensator is not affine in the gain. effort : fixed and sloped numerator of the transfer from measurement noise
+    to the processor's output, C/(1 + L) = (fixed + gain * sloped) z**delay/characteristic.
+    """
+
+    below: Real
+    fixed: Real
+    sloped: Real
+    effort: tuple[Real, Real]
+
+
+def open_loop(sampled: Sampled, compensator: Compensator, group: Group) -> OpenLoop:
+    """What frequency measures need of the pairs of a group."""
+    below = sampled.denominator[group.rows, group.columns, 0][:, None]
+    above = sampled.numerator[group.rows, group.columns, 0][:, None]
+    under = np.moveaxis(compensator.denominator[0][:, group.columns], 0, 1)
+    over = np.moveaxis(compensator.numerator[0][:, group.columns], 0, 1)
+    fixed, sloped = (over[:, :1], over[:, 1:]) if compensator.affine else (over, np.zeros_like(over))
+    return OpenLoop(
+        _product(below, under), _product(above, fixed), _product(above, sloped),
+        (_product(below, fixed), _product(below, sloped)),
+    )  # fmt: skip
 
 
 def power_of_z(delay: int, variable: int) -> Real:

@@ -10,7 +10,8 @@ import xarray
 from numpy.typing import NDArray
 
 import explorer
-from explorer.kernels.roots import SOLVED, STATUS_MEANING
+from explorer.kernels.roots import SOLVED
+from explorer.measures.measuring import STATUS_MEANING
 from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE, SCENARIO, SWEEP, dims_of
 from explorer.study.display import format_shown
 from explorer.study.model import Axis, Study

@@ -1,4 +1,4 @@
-"""Reduction: solved groups of loops in, the worst of each requirement over the scenarios of a scale out."""
+"""Reduction: measured groups of loops in, the worst of each requirement over the scenarios of a scale out."""
 
 from __future__ import annotations
 
@@ -8,11 +8,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from explorer.kernels.lanes import LANES
-from explorer.kernels.roots import SOLVED, STATUS_MEANING
+from explorer.kernels.roots import SOLVED
 from explorer.kernels.worst import count_met, keep_worst
 from explorer.loop.closing import Group
-from explorer.loop.solving import Solved
-from explorer.measures.by_poles import BY_POLES, Reduced
+from explorer.measures.measuring import STATUS_MEANING, Measured
 from explorer.study.model import Study
 from explorer.sweeping.scenarios import Scenarios
 
@@ -23,8 +22,8 @@ Real = NDArray[np.float64]
 class TileResult:
     """R requirements, X scales, P periods of the tile, G gains.
 
-    nominal (R, P, G); worst, worst_scenario (R, X, P, G); share (X, P, G); tally : loops per status (5,);
-    first : (5, 2) gain and period of the first loop of each status, NaN where none.
+    nominal (R, P, G); worst, worst_scenario (R, X, P, G); share (X, P, G); tally : loops per status;
+    first : (statuses, 2) gain and period of the first loop of each status, NaN where none.
     """
 
     nominal: Real
@@ -52,17 +51,12 @@ class Reduction:
         self.tally = np.zeros(len(STATUS_MEANING), np.int64)
         self.first = np.full((len(STATUS_MEANING), 2), np.nan)
 
-    def add(self, group: Group, solved: Solved, true_period: Real) -> None:
-        """Measure a group's loops and merge them; true_period : (M,) of its pairs."""
-        pairs = len(group.rows)
-        lanes = np.minimum(np.arange(len(solved.status) * LANES), pairs - 1).reshape(-1, LANES)
-        period = true_period[lanes][:, None]
-        poles = Reduced(*solved.reductions[: len(Reduced._fields)])
-        self._count(solved.status, group, pairs)
-        scale = self.entry[group.rows]
-        met = np.ones(solved.status.shape, bool)
-        for index, one in enumerate(self.study.requirements):
-            value = BY_POLES[one.measure.key](poles, period, one.band)
+    def add(self, group: Group, measured: Measured) -> None:
+        """Merge a group's measured loops."""
+        pairs, scale = len(group.rows), self.entry[group.rows]
+        self._count(measured.status, group, pairs)
+        met = np.ones(measured.status.shape, bool)
+        for index, (one, value) in enumerate(zip(self.study.requirements, measured.values, strict=True)):
             keep_worst(
                 value, pairs, group.rows, group.columns, scale, self.signs[index], one.sense == "below",
                 self.limits[index], met, self.worst[index], self.place[index],

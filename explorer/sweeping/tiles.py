@@ -19,6 +19,7 @@ from explorer.loop.compensator import Compensator, compensator_on_axes
 from explorer.loop.sampling import delays_of, sample
 from explorer.loop.solving import solve
 from explorer.loop.word_length import rounded
+from explorer.measures.measuring import Measuring
 from explorer.study.expressions import ExpressionError
 from explorer.study.model import Study
 from explorer.study.reading import fault_in
@@ -82,8 +83,10 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile, alike: dict[int, int
     Raises StudyError where an expression has no value somewhere on the axes or in the tolerance box.
     """
     period, gain = study.period.values[tile.start : tile.stop], study.gain.values
-    compensator = _compensator(study, design_values(study, tile.design), period)
-    sampled = _sampled(study, scenarios.by_name(), period)
+    compensator = compensator_of(study, design_values(study, tile.design), period)
+    table = scenarios.by_name()
+    sampled = sampled_of(study, table, period)
+    measuring = Measuring(study, sampled, compensator, table, period)
     reduction, steps = Reduction(study, scenarios, period), gain_steps(gain)
     pairs = max(LANES, LOOPS_AT_ONCE // len(gain) // LANES * LANES)
     for whole in groups_of(sampled):
@@ -91,11 +94,12 @@ def compute(study: Study, scenarios: Scenarios, tile: Tile, alike: dict[int, int
             part = slice(start, start + pairs)
             group = Group(whole.delay, whole.rows[part], whole.columns[part])
             solved = solve(sampled, compensator, group, steps, alike[whole.delay])
-            reduction.add(group, solved, sampled.period[group.rows, group.columns])
+            reduction.add(group, measuring.of(group, solved))
     return reduction.result()
 
 
-def _compensator(study: Study, design: dict[str, float], period: Real) -> Compensator:
+def compensator_of(study: Study, design: dict[str, float], period: Real) -> Compensator:
+    """The compensator as the processor runs it; StudyError where its expression has no value."""
     values = {parameter.name: parameter.nominal for parameter in study.parameters} | design
     try:
         exact = compensator_on_axes(study.loop, values, study.gain.values, period)
@@ -105,7 +109,8 @@ def _compensator(study: Study, design: dict[str, float], period: Real) -> Compen
     return rounded(exact, study.gain.values, bits) if bits else exact
 
 
-def _sampled(study: Study, table: dict[str, Real], period: Real) -> Sampled:
+def sampled_of(study: Study, table: dict[str, Real], period: Real) -> Sampled:
+    """The sampled plants of a table of parameter values; StudyError where an expression has no value."""
     try:
         return sample(study, table, period)
     except ExpressionError as error:
