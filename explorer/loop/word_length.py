@@ -34,13 +34,14 @@ def rounded(compensator: Compensator, gain: Real, bits: int) -> Compensator:
 
 
 def _to_steps(coefficients: Real, bits: int) -> Real:
-    """Rounded to nearest; what rounds up beyond the largest number of the scale becomes that number."""
+    """Rounded to nearest in the smallest scale that holds every one of them, rounded, in two's complement."""
     if not coefficients.shape[-1]:
         return coefficients
     _, exponent = np.frexp(np.abs(coefficients).max(axis=-1, keepdims=True))  # the largest lies below 2**exponent
     step = np.ldexp(1.0, exponent - (bits - 1))
-    most = 2.0 ** (bits - 1) - 1
-    return np.clip(np.rint(coefficients / step), -most - 1, most) * step
+    overflows = (np.rint(coefficients / step) >= 2.0 ** (bits - 1)).any(axis=-1, keepdims=True)
+    step = np.where(overflows, 2 * step, step)
+    return np.rint(coefficients / step) * step
 
 
 def _shifted(polynomial: Real) -> Real:

@@ -84,6 +84,24 @@ def probe(study: Study, at: Place) -> xarray.Dataset:
     return xarray.Dataset(arrays, coordinates, _provenance(point, values))
 
 
+def values_at(study: Study, at: Place, requirements: tuple[Requirement, ...]) -> tuple[Scenarios, Real]:
+    """The scenarios, and the values (requirements, S) of other requirements at one design point."""
+    point, _ = _at_point(dataclasses.replace(study, requirements=requirements), at)
+    scenarios, period = scenarios_of(point), point.period.values
+    compensator = compensator_of(point, {axis.name: axis.values[0] for axis in point.design}, period)
+    table = scenarios.by_name()
+    return scenarios, _measured(point, sampled_of(point, table, period), compensator, table)[0]
+
+
+def twin_of(requirement: Requirement) -> Requirement | None:
+    """The same requirement read from the response where it is read from the poles; None for measures without."""
+    key = f"{requirement.measure.name} by response"
+    measure = next((one for one in CATALOGUE if one.key == key), None)
+    if requirement.measure.basis != "poles" or measure is None:
+        return None
+    return dataclasses.replace(requirement, measure=measure)
+
+
 def _at_point(study: Study, at: Place) -> tuple[Study, dict[str, float]]:
     """The study with every axis cut down to the one value."""
     axes = {axis.name: axis for axis in (study.gain, study.period, *study.design)}
@@ -119,19 +137,21 @@ def _others(study: Study) -> tuple[Requirement, ...]:
     """The catalogue's measures that the study does not ask for, without limits."""
     known = {(one.measure.key, one.reference) for one in study.requirements}
     stated = ["execution_time"] if study.loop.execution_time > 0 else []
+    bands = [one.band for one in study.requirements if one.measure.band is not None]
     found = []
     for measure in CATALOGUE:
         for reference in measure.inputs or ("",):
             possible = all(key in stated for key in measure.needs)
             if measure.takes_limit and possible and (measure.key, reference) not in known:
-                found.append(_without_limit(measure, reference, study.time_unit))
+                found.append(_without_limit(measure, reference, study.time_unit, bands))
     return tuple(found)
 
 
-def _without_limit(measure: Measure, reference: str, time_unit: str) -> Requirement:
+def _without_limit(measure: Measure, reference: str, time_unit: str, bands: list[float]) -> Requirement:
+    """bands : of the study's own settling times; the first holds for the other reading of it too."""
     name = f"{measure.key}, {reference}" if reference else measure.key
     sense = "at least" if measure.better == "more" else "at most"
-    band = np.nan if measure.band is None else measure.band
+    band = np.nan if measure.band is None else [*bands, measure.band][0]
     return Requirement(name, measure, sense, np.nan, False, np.nan, band, reference, unit_in(measure, time_unit))
 
 

@@ -12,8 +12,10 @@ import numpy as np
 import xarray
 from numpy.typing import NDArray
 
+from explorer.measures.asking import read_study
 from explorer.names import GAIN, MEASURE, PARAMETER, PERIOD, SCALE
 from explorer.study.display import format_shown
+from explorer.verdict.promises import in_words, promises_kept
 from explorer.verdict.region import gain_windows, slowest_period
 
 Real = NDArray[np.float64]
@@ -34,7 +36,8 @@ def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
     dict : "answer" in words; "feasible"; "slowest_period" (None, or period, grid_period, gain, gain_window,
         design, stopped_by, scenario, at_axis_end); "recommended" (None, or period, gain, design, least_slack,
         binding, scenario, values); "nearest" where nothing holds; "nominal" with the first two for the nominal
-        plant; "unknown_points" (cells, at the tolerances as stated); "units".
+        plant; "poles_against_response", see verdict.promises; "unknown_points" (cells, at the tolerances as stated);
+        "units".
     """
     box = verdict.sel({SCALE: AS_STATED})
     worst = sweep.sel({SCALE: AS_STATED})
@@ -56,6 +59,11 @@ def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
         "swept_periods": len(toleranced.period),
         "limits": verdict.attrs["limits"],
     }
+    study = read_study(text=str(sweep.attrs["study"]))
+    places = {"recommended design": decision["recommended"], "slowest period": decision["slowest_period"]}
+    if not decision["feasible"]:
+        places = {"nearest point": decision["nearest"]}
+    decision["poles_against_response"] = promises_kept(study, places)
     provenance = ("study_sha256", "explorer_version", "seed", "created", "status_tally")
     decision |= _units(sweep, toleranced.design) | {name: verdict.attrs[name] for name in provenance}
     return decision | {"answer": answer_in_words(decision)}
@@ -171,6 +179,7 @@ def answer_in_words(decision: Decision) -> str:
         sentences.append(
             f"{decision['unknown_points']} of {decision['points']} points are unknown and count as not feasible."
         )
+    sentences += in_words(decision["poles_against_response"])
     return " ".join(sentences)
 
 

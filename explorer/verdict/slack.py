@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from explorer.errors import OptionError
 from explorer.measures.asking import read_study
-from explorer.names import MEASURE, PARAMETER, PERIOD, VERDICT, dims_of
+from explorer.names import PARAMETER, PERIOD, VERDICT, dims_of
 from explorer.study.collect import Collector
 from explorer.study.expressions import closest
 from explorer.study.model import Requirement, Study
