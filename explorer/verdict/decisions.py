@@ -60,9 +60,11 @@ def decide(sweep: xarray.Dataset, verdict: xarray.Dataset) -> Decision:
         "limits": verdict.attrs["limits"],
     }
     study = read_study(text=str(sweep.attrs["study"]))
-    places = {"recommended design": decision["recommended"], "slowest period": decision["slowest_period"]}
+    places = {"recommended design": decision["recommended"]}
     if not decision["feasible"]:
         places = {"nearest point": decision["nearest"]}
+    elif len(toleranced.period) > 1:
+        places["slowest period"] = decision["slowest_period"]
     decision["poles_against_response"] = promises_kept(study, places)
     provenance = ("study_sha256", "explorer_version", "seed", "created", "status_tally")
     decision |= _units(sweep, toleranced.design) | {name: verdict.attrs[name] for name in provenance}
