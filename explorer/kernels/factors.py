@@ -263,11 +263,12 @@ def _polynomial(coefficients: tuple[float, ...], x: Row) -> Row:
 
 
 def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
-    """Factors to what measures need of the poles, s·T = log z.
+    """Factors and their certificate to what measures need of the poles, s·T = log z.
 
     code : degree, for factors in w = z - 1; degree + IN_Z for factors in z. Returns largest log|z|; least damping
     ratio; least |log z|; log|z| and angle of the slowest pair of non-real z (NONE and 0 when there is none); and 1.0
-    where the variable resolves all that matters, else 0.0, see `_resolved`. log|z| of a pole at z = 0 is FLOOR.
+    where the factors are certified and the variable resolves all that matters, else 0.0, see `resolved`. log|z| of a
+    pole at z = 0 is FLOOR.
     """
     degree, in_z = code % IN_Z, code >= IN_Z
     poles, pairs = _poles(operations, degree, rows, in_z)
@@ -299,7 +300,7 @@ def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
             lambda: resolved(operations, factors, linear, damping, seen, in_z),
             1.0,
         )
-    return [slowest, damping, operations.sqrt(least), pair, turn, sharp]
+    return [slowest, damping, operations.sqrt(least), pair, turn, sharp * rows[degree]]
 
 
 def _poles(

@@ -26,12 +26,12 @@ _MOST_ROUNDS = 6
 
 _advance = emitted(advanced, lambda degree: (-5, degree + 1, degree + 1, 4 * degree))
 _repeat = emitted(repeated, lambda degree: (-1, degree + 1, degree + 1, degree + 1))
-_reduce = emitted(reduced, lambda code: (code % IN_Z,))
+_reduce = emitted(reduced, lambda code: (code % IN_Z + 1,))
 
 
 @functools.cache
 def tracker(degree: int, in_z: bool = False) -> Any:
-    """The compiled function (constant, slope, steps, reductions, certificates) for one degree; see `_track`.
+    """The compiled function (constant, slope, steps, reductions) for one degree; see `_track`.
 
     in_z : the polynomials are in z, not in w = z - 1.
 
@@ -46,10 +46,9 @@ def tracker(degree: int, in_z: bool = False) -> Any:
         slope: NDArray[Any],
         steps: NDArray[Any],
         reductions: NDArray[Any],
-        certificates: NDArray[Any],
     ) -> None:
         if sources:  # always true; see above
-            _track(degree, code, constant, slope, steps, reductions, certificates)
+            _track(degree, code, constant, slope, steps, reductions)
 
     return run
 
@@ -70,21 +69,19 @@ def _track(
     slope: NDArray[Any],
     steps: NDArray[Any],
     reductions: NDArray[Any],
-    certificates: NDArray[Any],
 ) -> None:
     """Follow the poles of every scenario along the gains.
 
     Parameters
     ----------
     degree, code : literals, see factors.reduced; constant, slope : (blocks, degree+1, LANES) descending powers of w.
-    steps : (G, 5) from `gain_steps`. reductions : (REDUCTIONS, blocks, G, LANES) out, see factors.reduced.
-    certificates : (blocks, G, LANES) out, 1.0 where the poles are certified and resolved; the reductions
-        elsewhere mean nothing.
+    steps : (G, 5) from `gain_steps`. reductions : (REDUCTIONS, blocks, G, LANES) out, see factors.reduced: the last
+        is 1.0 where the poles are certified and resolved; elsewhere the others mean nothing.
     """
     degree, code = literally(degree), literally(code)
     gains, blocks = steps.shape[0], constant.shape[0]
     loops = blocks * gains
-    found, marks = reductions.reshape(REDUCTIONS * loops, LANES), certificates.reshape(loops, LANES)
+    found = reductions.reshape(REDUCTIONS * loops, LANES)
     past = np.zeros(((gains + 4) * degree + 1, LANES))  # factors of all gains, four rows of room before them
     stride = 0 if constant.shape[1] == degree + 1 else degree + 1
     for block in range(blocks):
@@ -111,8 +108,6 @@ def _track(
                             solve_afresh(below, above, at, degree, steps[index, 0], lane, past, here)
             row = block * gains + index
             _reduce(code, (past, here, found, row, loops))
-            for lane in range(LANES):
-                marks[row, lane] = past[here + degree, lane] * found[row + (REDUCTIONS - 1) * loops, lane]
 
 
 def gain_steps(gain: NDArray[np.float64]) -> NDArray[np.float64]:

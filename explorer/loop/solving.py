@@ -50,22 +50,24 @@ def solve(sampled: Sampled, compensator: Compensator, group: Group, steps: Real,
     degree, pairs = degree_of(sampled, compensator, group.delay), len(group.rows)
     blocks, gain = -(-pairs // LANES), steps[:, 0]
     reductions = np.empty((REDUCTIONS, blocks, len(gain), LANES))
+    certificates = reductions[-1]
     status = np.full((blocks, len(gain), LANES), SOLVED, np.int8)
     if degree > HIGHEST_DEGREE:
         status[:], reductions[:] = TOO_LONG, np.nan
         return Solved(reductions, status)
     in_w = characteristic(sampled, compensator, group, variable=0)
-    certificates = np.zeros((blocks, len(gain), LANES))  # none yet
     tracked = alike >= WORTH_TRACKING and 0 < degree <= HIGHEST_TRACKED
     if tracked:
         constant, slope = (_in_lanes(part, blocks) for part in in_w)
-        tracker(degree)(constant, slope, steps, reductions, certificates)
+        tracker(degree)(constant, slope, steps, reductions)
+    else:
+        certificates[:] = 0.0
     if (certificates == 1.0).all():
         return Solved(reductions, status)
     in_z = characteristic(sampled, compensator, group, variable=1)
     if tracked and (certificates != 1.0).mean() * alike >= WORTH_TRACKING:
-        _track_in_z(degree, in_z, steps, reductions, certificates)
-    _solve_rest(in_w, in_z, gain, reductions, status, certificates)
+        _track_in_z(degree, in_z, steps, reductions)
+    _solve_rest(in_w, in_z, gain, reductions, status)
     return Solved(reductions, status)
 
 
@@ -77,18 +79,17 @@ def _in_lanes(polynomials: Real, blocks: int) -> Real:
     return np.ascontiguousarray(flat.reshape(blocks, LANES, -1).transpose(0, 2, 1))
 
 
-def _track_in_z(degree: int, in_z: tuple[Real, Real], steps: Real, reductions: Real, certificates: Real) -> None:
+def _track_in_z(degree: int, in_z: tuple[Real, Real], steps: Real, reductions: Real) -> None:
     """Blocks in which w left much unresolved once more in z, in place."""
+    certificates = reductions[-1]
     blocks = np.flatnonzero((certificates != 1.0).mean(axis=(1, 2)) > _WORTH_A_SECOND_RUN)
     if not len(blocks):
         return
     constant, slope = (_in_lanes(part, len(certificates))[blocks] for part in in_z)
-    marks = np.empty((len(blocks), *certificates.shape[1:]))
-    again = np.empty((REDUCTIONS, *marks.shape))
-    tracker(degree, in_z=True)(constant, slope, steps, again, marks)
-    better = (marks == 1.0) & (certificates[blocks] != 1.0)
+    again = np.empty((REDUCTIONS, len(blocks), *certificates.shape[1:]))
+    tracker(degree, in_z=True)(constant, slope, steps, again)
+    better = (again[-1] == 1.0) & (certificates[blocks] != 1.0)
     reductions[:, blocks] = np.where(better, again, reductions[:, blocks])
-    certificates[blocks] = np.where(better, 1.0, certificates[blocks])
 
 
 def _solve_rest(
@@ -97,11 +98,10 @@ def _solve_rest(
     gain: Real,
     reductions: Real,
     status: NDArray[np.int8],
-    certificates: Real,
 ) -> None:
     """Every loop without certificate by companion eigenvalues, in place."""
     pairs, own_gains = in_w[0].shape[:2]
-    block, step, lane = np.nonzero(certificates != 1.0)
+    block, step, lane = np.nonzero(reductions[-1] != 1.0)
     pair = np.minimum(block * LANES + lane, pairs - 1)
     for start in range(0, len(block), _LAPACK_AT_ONCE):
         part = slice(start, start + _LAPACK_AT_ONCE)

@@ -73,7 +73,7 @@ class Job:
             np.ascontiguousarray(part.reshape(blocks, LANES, -1).transpose(0, 2, 1)) for part in (constant, slope)
         ]
         self.reductions = np.zeros((REDUCTIONS, blocks, len(GAIN), LANES))
-        self.marks, self.kernel = np.zeros((blocks, len(GAIN), LANES)), tracker(degree)
+        self.kernel = tracker(degree)
 
     def repeat(self) -> Job:
         """Track REPEATS times: once is over before a second thread is awake."""
@@ -82,8 +82,8 @@ class Job:
         return self
 
     def run(self) -> Job:
-        """Track; the answer is in reductions and marks."""
-        self.kernel(*self.lanes, STEPS, self.reductions, self.marks)
+        """Track; the answer is in reductions."""
+        self.kernel(*self.lanes, STEPS, self.reductions)
         return self
 
 
@@ -115,7 +115,7 @@ def _row(degree: int, families: int, threads: ThreadPoolExecutor) -> tuple[str, 
         }  # fmt: skip
         best = best_times(ways, ROUNDS, _agreeing)
         times.append([best[way] / (SCENARIOS * len(GAIN)) * 1e9 for way in ways])
-        handed.append(float((job.marks != 1.0).mean()))
+        handed.append(float((job.reductions[-1] != 1.0).mean()))
     kernel, bare, two = np.array(times).T / [[REPEATS], [1], [REPEATS]]
     ratio = bare / kernel
     return (
@@ -129,7 +129,7 @@ def _agreeing(answers: Mapping[str, Any]) -> None:
     # One thread's numbers and two's differ in the last bits: a block's first gain starts from the block before
     for jobs in ([answers["kernel"]], answers["two threads"]):
         reductions = np.concatenate([job.reductions for job in jobs], axis=1)
-        sure = np.concatenate([job.marks for job in jobs]) == 1.0
+        sure = np.concatenate([job.reductions[-1] for job in jobs]) == 1.0
         difference = np.abs(np.exp(reductions[0]) - radius)[sure] / radius[sure]
         if difference.max() > 1e-6:  # nearly double roots move by the square root of rounding
             raise RuntimeError(f"spectral radii differ by {difference.max():.1e}")
