@@ -46,12 +46,16 @@ class Machines:
 
     def __init__(self, folder):
         self.folder, self.processes = folder, []
-        self.file = folder / "scheduler.json"
-        self.start("scheduler", "--host", "127.0.0.1", "--port", "0", "--no-dashboard", "--scheduler-file", self.file)
-        while not self.file.exists():
+        self.address = ""
+
+    def listen(self):
+        """Start the scheduler and wait for its address."""
+        file = self.folder / "scheduler.json"
+        self.start("scheduler", "--host", "127.0.0.1", "--port", "0", "--no-dashboard", "--scheduler-file", file)
+        while not (file.exists() and file.read_text().strip()):
             assert self.processes[0].poll() is None
             time.sleep(0.05)
-        self.address = json.loads(self.file.read_text())["address"]
+        self.address = json.loads(file.read_text())["address"]
 
     def start(self, *words):
         command = [sys.executable, "-m", "dask", *map(str, words)]
@@ -85,8 +89,11 @@ def machines(tmp_path, monkeypatch):
     monkeypatch.setattr(tiles, "FEWEST_LOOPS", 1)
     (tmp_path / "machines").mkdir()
     started = Machines(tmp_path / "machines")
-    yield started
-    started.stop()
+    try:
+        started.listen()
+        yield started
+    finally:
+        started.stop()
 
 
 def both_ready(machines, count):

@@ -95,7 +95,8 @@ def test_probe_and_sweep_agree(mixed):
         )
         worst = mixed["worst_value"].sel(gain=gain, period=0.03, tolerance_scale=1.0)
         for name, end in (("overshoot", np.max), ("phase margin", np.min), ("damping ratio", np.min)):
-            assert end(found["value"].sel(measure=name).values) == pytest.approx(float(worst.sel(measure=name)), rel=1e-12)
+            value = end(found["value"].sel(measure=name).values)
+            assert value == pytest.approx(float(worst.sel(measure=name)), rel=1e-12)
 
 
 def test_batches_and_workers_give_the_same_bits(mixed, monkeypatch):
@@ -158,7 +159,7 @@ def test_probe_answers_for_every_scenario():
     [
         ('measure = "processor load"\nat_most = "30 %"', "processor load without execution_time"),
         ('measure = "rise time"\nat_most = "1 s"', r'rise time needs basis = "response"'),
-        ('measure = "steady-state error"\nbasis = "response"\ninput = "sine"\nat_most = 1', r'allowed: "step" or "ramp"'),
+        ('measure = "steady-state error"\nbasis = "response"\ninput = "sine"\nat_most = 1', '"step" or "ramp"'),
         ('measure = "stability"\ninput = "step"', "only with a steady-state error"),
     ],
 )

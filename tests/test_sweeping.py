@@ -120,7 +120,8 @@ def test_equal_values_and_unknown_ones_are_put_down_to_the_first_scenario(turned
     worst, place = np.full((1, 1, 3), -np.inf), np.full((1, 1, 3), -1, np.int32)
     for scenario in sorted(values, reverse=turned):
         lanes, met = np.array(values[scenario]).reshape(1, 3, 1), np.ones((1, 3, 1), bool)
-        keep_worst(lanes, 1, np.array([scenario]), np.array([0]), np.array([0]), 1.0, False, np.array([4.0]), met, worst, place)
+        first, limit = np.array([0]), np.array([4.0])
+        keep_worst(lanes, 1, np.array([scenario]), first, first, 1.0, False, limit, met, worst, place)
         assert met.ravel().tolist() == [value <= 4.0 for value in values[scenario]]
     assert place.tolist() == [[[1, 1, 2]]]
     np.testing.assert_array_equal(worst, [[[5.0, np.nan, np.nan]]])

@@ -57,7 +57,8 @@ def tracker(degree: int, in_z: bool = False) -> Any:
 def _sources() -> int:
     """A checksum of the sources that end up in the machine code of a tracker, never 0."""
     folder = Path(__file__).parent
-    texts = [(folder / f"{name}.py").read_bytes() for name in ("compiling", "factors", "lanes", "resolution", "restart")]
+    names = ("compiling", "factors", "lanes", "resolution", "restart")
+    texts = [(folder / f"{name}.py").read_bytes() for name in names]
     return zlib.crc32(b"".join(texts)) + 1
 
 

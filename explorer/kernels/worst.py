@@ -33,9 +33,9 @@ def keep_worst(
     values : (blocks, G, LANES); pair k is lane k % LANES of block k // LANES. scenario, column, scale : (M,) of each
         pair, scenarios ascending within a column.
     sign : +1 when larger is worse, -1 when smaller is. strict : whether a value at the limit misses it.
-    limit : (P,); met : (blocks, G, LANES) bool, made false where the limit is missed or the value NaN. worst : (scales, P, G) of sign * value, NaN unknown, in place;
-        place : (scales, P, G) int32, -1 where nothing was seen. The first NaN wins over every number; of equal values
-        the lowest scenario stays.
+    limit : (P,); met : (blocks, G, LANES) bool, made false where the limit is missed or the value NaN.
+    worst : (scales, P, G) of sign * value, NaN unknown, in place; place : (scales, P, G) int32, -1 where nothing was
+        seen. The first NaN wins over every number; of equal values the lowest scenario stays.
     """
     lanes = values.shape[2]
     for pair in range(pairs):

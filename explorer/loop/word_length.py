@@ -41,7 +41,7 @@ def _to_steps(coefficients: Real, bits: int) -> Real:
     step = np.ldexp(1.0, exponent - (bits - 1))
     overflows = (np.rint(coefficients / step) >= 2.0 ** (bits - 1)).any(axis=-1, keepdims=True)
     step = np.where(overflows, 2 * step, step)
-    return np.rint(coefficients / step) * step
+    return np.asarray(np.rint(coefficients / step) * step)
 
 
 def _shifted(polynomial: Real) -> Real:

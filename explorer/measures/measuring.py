@@ -7,7 +7,7 @@ and frequency measure: +inf where the limit is an upper one, -inf where it is a 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -109,7 +109,7 @@ class Measuring:
         return [found[name] for name in names], unknown
 
 
-def by_pair(rows: Real, pairs: int) -> Real:
+def by_pair(rows: NDArray[Any], pairs: int) -> NDArray[Any]:
     """Values in lanes, (blocks, G, LANES), by pair: (M, G)."""
     return rows.transpose(0, 2, 1).reshape(-1, rows.shape[1])[:pairs]
 

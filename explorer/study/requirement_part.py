@@ -128,7 +128,8 @@ def _measure(
     if not named:
         names = list(dict.fromkeys(measure.name for measure in catalogue))
         collector.fault((*path, "measure"), f"unknown measure {shown(section.measure)}",
-                        f"allowed: one of the {len(names)} that `explorer measures` lists", closest(section.measure, names))  # fmt: skip
+                        f"allowed: one of the {len(names)} that `explorer measures` lists",
+                        closest(section.measure, names))  # fmt: skip
         return None
     bases = [measure.basis for measure in named if measure.basis]
     if not bases:

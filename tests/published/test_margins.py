@@ -4,7 +4,6 @@ import numpy as np
 import pytest
 from numpy import arccos, arcsin, degrees, exp, sqrt
 
-
 AGREEMENT = 1e-9  # promised for every frequency measure
 PERIOD = 0.2
 

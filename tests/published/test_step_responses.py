@@ -4,7 +4,6 @@ import numpy as np
 import pytest
 from numpy import exp, log, sqrt
 
-
 RESPONSE = 1e-6  # promised for response times; other response values are promised to 1e-9
 VALUE = 1e-9
 
