@@ -70,7 +70,8 @@ def check(study: Path, as_data: bool) -> None:
     from explorer.views.plain import as_json
 
     read = read_study(study)
-    facts = understood(read, *estimate(read))
+    with waiting("A short trial of the sweep; the first one on a machine compiles its kernels"):
+        facts = understood(read, *estimate(read))
     click.echo(as_json(facts) if as_data else echo(read, facts))
 
 
@@ -161,6 +162,33 @@ def decide(folder: Path, as_data: bool, strict: bool) -> None:
 
 
 @main.command()
+@STUDY
+@click.option("--at", "place", multiple=True, metavar="NAME=VALUE[,NAME=VALUE...]", help="The design point.")
+@click.option("--out", metavar="DIR", help="Folder of the pictures [default: outputs/<stem of STUDY>-probe].")
+@JSON
+@click.option("--strict", is_flag=True, help="Exit with status 1 when a requirement is missed or unknown.")
+def probe(study: Path, place: tuple[str, ...], out: str | None, as_data: bool, strict: bool) -> None:
+    """One design point in every scenario: requirements, worst plants, poles, responses, loop gain, three pictures.
+
+    Scenario 0 is the nominal plant; the worst is that of the scenarios within the tolerances as stated, and so is
+    what --strict goes by. With --json pictures are drawn only into a stated --out.
+    """
+    from explorer import probe as probed_at
+    from explorer import read_study
+    from explorer.views.probe_folder import probe_folder, write_pictures
+    from explorer.views.probe_text import document, probe_text
+    from explorer.views.probed import judged
+
+    folder, words = probe_folder(study, out), tuple(part for word in place for part in word.split(","))
+    found = judged(probed_at(read_study(study), pairs(words, "--at")))
+    click.echo(document(found) if as_data else probe_text(found))
+    if out or not as_data:
+        written = write_pictures(folder, found.dataset)
+        click.echo(f"\nWritten to {folder}/: {', '.join(path.name for path in written)}", err=as_data)
+    end(strict and not found.met)
+
+
+@main.command()
 @JSON
 def measures(as_data: bool) -> None:
     """Every measure a requirement may name: unit, basis, definition, source."""
@@ -212,6 +240,19 @@ def described(error: Exception) -> str:
     if isinstance(error, OSError):
         return f"{error.filename or 'output'}: {error.strerror or error}"
     return f"Failed with {type(error).__name__}: {error}. This is a fault of explorer; --debug shows where."
+
+
+@contextlib.contextmanager
+def waiting(text: str) -> Iterator[None]:
+    """Say on stderr what takes a moment; silent when stderr is no terminal."""
+    from rich.console import Console
+
+    console = Console(stderr=True)
+    if not sys.stderr.isatty():
+        yield
+        return
+    with console.status(text):
+        yield
 
 
 @contextlib.contextmanager

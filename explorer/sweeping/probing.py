@@ -34,6 +34,7 @@ Place = Mapping[str, str | int | float]
 _POINTS = 1200  # of the responses in time, sampling instants among them
 _MOST_SAMPLES = 20_000
 _FREQUENCIES = 500
+_STRETCH = 6.0
 _SHOWN = 1e-3  # of its start, down to which the slowest mode of the stable scenarios is shown
 
 
@@ -195,11 +196,15 @@ def _over(log_z: NDArray[np.complex128], period: Real) -> NDArray[np.complex128]
 def _motion(
     study: Study, sampled: Sampled, compensator: Compensator, table: Mapping[str, Real], log_z: NDArray[np.complex128]
 ) -> Trajectories:
-    """Responses until the slowest mode of the stable scenarios has gone, or a few samples where none is stable."""
+    """Responses until the slowest mode of the stable scenarios has gone, or a few samples where none is stable.
+
+    A plant that hardly decays may stretch the time of the nominal one, or of the fastest, so many times and no more.
+    """
     period = float(study.period.values[0])
     slowest = np.nanmax(np.where(np.isnan(log_z.real), -np.inf, log_z.real), axis=1, initial=-np.inf)
     rates = -slowest[(slowest < 0) & np.isfinite(slowest)]
-    samples = np.log(1 / _SHOWN) / rates.min() if len(rates) else 40.0
+    usual = -slowest[0] if slowest[0] < 0 and np.isfinite(slowest[0]) else rates.max(initial=0.0)
+    samples = np.log(1 / _SHOWN) / max(rates.min(), usual / _STRETCH) if len(rates) else 40.0
     samples = float(np.clip(np.ceil(samples + sampled.whole.max() + 4), 12, _MOST_SAMPLES))
     between = max(1, int(_POINTS // samples))
     if between > 1:
