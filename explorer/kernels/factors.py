@@ -72,7 +72,7 @@ def advanced(operations: Any, degree: int, *rows: Row) -> list[Row]:
     """
     gain, weights = rows[0], rows[1:5]
     constant, slope, past = rows[5 : 6 + degree], rows[6 + degree : 7 + 2 * degree], rows[7 + 2 * degree :]
-    target = _monic(constant, slope, gain)
+    target = _monic(operations, constant, slope, gain)
     if degree <= 2:
         return _finite(operations, target)
     factors = []
@@ -87,7 +87,7 @@ def advanced(operations: Any, degree: int, *rows: Row) -> list[Row]:
 
 def repeated(operations: Any, degree: int, *rows: Row) -> list[Row]:
     """Correct once more what is not certified, and check; rows : gain, a_0..a_n, b_0..b_n, factors, certificate."""
-    target = _monic(rows[1 : 2 + degree], rows[2 + degree : 3 + 2 * degree], rows[0])
+    target = _monic(operations, rows[1 : 2 + degree], rows[2 + degree : 3 + 2 * degree], rows[0])
     if degree <= 2:
         return _finite(operations, target)
     factors, certified = list(rows[3 + 2 * degree : 3 + 3 * degree]), rows[3 + 3 * degree] == 1.0
@@ -113,8 +113,9 @@ def _finite(operations: Any, target: list[Row]) -> list[Row]:
     return [*target, operations.where(size < 1e200, 1.0, 0.0)]
 
 
-def _monic(constant: Any, slope: Any, gain: Row) -> list[Row]:
-    share = 1.0 / (constant[0] + gain * slope[0])
+def _monic(operations: Any, constant: Any, slope: Any, gain: Row) -> list[Row]:
+    leading = constant[0] + gain * slope[0]
+    share = operations.if_any(leading != 1.0, lambda: 1.0 / leading, 1.0)
     return [(a + gain * b) * share for a, b in zip(constant[1:], slope[1:], strict=True)]
 
 
@@ -266,7 +267,7 @@ def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
     """Factors and their certificate to what measures need of the poles, s·T = log z.
 
     code : degree, for factors in w = z - 1; degree + IN_Z for factors in z. Returns largest log|z|; least damping
-    ratio; least |log z|; log|z| and angle of the slowest pair of non-real z (NONE and 0 when there is none); and 1.0
+    ratio; least |log z|²; log|z| and angle of the slowest pair of non-real z (NONE and 0 when there is none); and 1.0
     where the factors are certified and the variable resolves all that matters, else 0.0, see `resolved`. log|z| of a
     pole at z = 0 is FLOOR.
     """
@@ -300,7 +301,7 @@ def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
             lambda: resolved(operations, factors, linear, damping, seen, in_z),
             1.0,
         )
-    return [slowest, damping, operations.sqrt(least), pair, turn, sharp * rows[degree]]
+    return [slowest, damping, least, pair, turn, sharp * rows[degree]]
 
 
 def _poles(
@@ -315,7 +316,8 @@ def _poles(
         paired = gap < 0.0
         spread = operations.sqrt(operations.absolute(gap))
         far = operations.where(half < 0.0, half - spread, half + spread)
-        near = v / operations.where(operations.absolute(far) > 0.0, far, 1.0)
+        divisor = operations.where(operations.absolute(far) > 0.0, far, 1.0)
+        near = operations.if_any(gap >= 0.0, lambda v=v, divisor=divisor: v / divisor, 0.0)
         (first_size, first_turn), (near_size, near_turn) = (_real_pole(operations, x, in_z) for x in (far, near))
         square = v if in_z else v - u
         first = _logarithm(operations, operations.where(paired, square, first_size), in_z)

@@ -72,6 +72,9 @@ class Symbol:
     def __eq__(self, other: Any) -> Symbol:  # type: ignore[override]
         return self._make(self.builder.fcmp_ordered("==", self.value, self._with(other)))
 
+    def __ne__(self, other: Any) -> Symbol:  # type: ignore[override]
+        return self._make(self.builder.fcmp_unordered("!=", self.value, self._with(other)))
+
     def __lt__(self, other: Any) -> Symbol:
         return self._make(self.builder.fcmp_ordered("<", self.value, self._with(other)))
 

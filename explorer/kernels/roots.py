@@ -84,7 +84,7 @@ def reductions_of(log_z: Complex) -> Real:
     pair = np.full(slowest.shape, NONE) if place is None else np.take_along_axis(own, place, -1)[..., 0]
     angle = np.zeros(slowest.shape) if place is None else np.take_along_axis(turn, place, -1)[..., 0]
     angle = np.where(pair == NONE, 0.0, angle)
-    least = absolute.min(axis=-1, initial=-FLOOR)
+    least = absolute.min(axis=-1, initial=-FLOOR) ** 2
     return np.stack([slowest, damping, least, np.where(unknown, np.nan, pair), np.where(unknown, np.nan, angle)])
 
 

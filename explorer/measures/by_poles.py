@@ -18,7 +18,7 @@ Real = NDArray[np.float64]
 
 
 class Reduced(NamedTuple):
-    """slowest : largest log|z|, FLOOR for z = 0; damping : least -Re s/|s|; frequency : least |s|T;
+    """slowest : largest log|z|, FLOOR for z = 0; damping : least -Re s/|s|; frequency : least (|s|T)²;
     pair, turn : log|z| and angle of the slowest pair of non-real z, NONE and 0 when there is none.
     """
 
@@ -36,7 +36,7 @@ def spectral_radius(poles: Reduced) -> Real:
 
 def natural_frequency(poles: Reduced, period: Real) -> Real:
     """Least |s| [rad/s]; +inf when every pole is at z = 0."""
-    return np.where(poles.slowest <= FLOOR, np.inf, poles.frequency / period)
+    return np.where(poles.slowest <= FLOOR, np.inf, np.sqrt(poles.frequency) / period)
 
 
 def settling_time(poles: Reduced, period: Real, band: float) -> Real:
