@@ -266,10 +266,9 @@ def _polynomial(coefficients: tuple[float, ...], x: Row) -> Row:
 def reduced(operations: Any, code: int, *rows: Row) -> list[Row]:
     """Factors and their certificate to what measures need of the poles, s·T = log z.
 
-    code : degree, for factors in w = z - 1; degree + IN_Z for factors in z. Returns largest log|z|; least damping
-    ratio; least |log z|²; log|z| and angle of the slowest pair of non-real z (NONE and 0 when there is none); and 1.0
-    where the factors are certified and the variable resolves all that matters, else 0.0, see `resolved`. log|z| of a
-    pole at z = 0 is FLOOR.
+    code : degree, for factors in w = z - 1; degree + IN_Z for factors in z. Returns largest log|z| (FLOOR for z = 0);
+    least damping ratio; least |log z|²; log|z| and angle of the slowest pair of non-real z (NONE and 0 without one);
+    and 1.0 where the factors are certified and the variable resolves all that matters, else 0.0, see `resolved`.
     """
     degree, in_z = code % IN_Z, code >= IN_Z
     poles, pairs = _poles(operations, degree, rows, in_z)
