@@ -328,8 +328,8 @@ def test_jumping_finds_what_stepping_finds(monkeypatch):
     def jumping(self, first, wanted, bands, found):
         shared = self._plants("edges", "table", "pieces")
         response.pursuer()(
-            self.plants.numbers, self.plants.outputs, *shared, self.pairs, first, self.others, self.delay, wanted,
-            bands, self.lanes, self.facts, self.begin, found,
+            self.plants.numbers, self.plants.outputs, self.plants.drift, *shared, self.pairs, first, self.others,
+            self.delay, wanted, bands, self.lanes, self.facts, self.begin, found, 2_000_000,
         )  # fmt: skip
 
     monkeypatch.setattr(response.Blocks, "_advance", jumping)

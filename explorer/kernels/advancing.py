@@ -12,6 +12,7 @@ import numpy as np
 from numba import literally
 from numpy.typing import NDArray
 
+from explorer.kernels.apart import apart
 from explorer.kernels.bernstein import DEGREE, ROOM
 from explorer.kernels.compiling import compiled
 from explorer.kernels.contraction import loop_matrix, loop_rows, padded, square, weigh
@@ -41,11 +42,10 @@ from explorer.kernels.watching import (
 PLANT, OTHER, INPUT_REST, OUTPUT_REST, ERROR, WINDOW, LINE, LINE_PULL, MISSED, DONE = range(10)
 FACTS = 10
 _STRETCH = 32  # samples between two looks at the bound
-_STRETCHES = 256
 _SQUARINGS = 12  # the longest window is 2**this samples
 _FIRST = 5  # 2**5 samples are a stretch
 _SHARE = 1e-10  # of the largest |u| or |y|: what may be missed of it
-_SLOWEST = 4.0 / (_STRETCH * _STRETCHES)  # -log|z| below which a loop is not even begun here
+_SLOWEST = 4.0 / (32 * 256)  # -log|z| below which a loop is not even begun here
 
 
 @functools.cache
@@ -79,7 +79,9 @@ def _weigh_blocks(
     for block in range(pairs.shape[0]):
         pair, own, known = pairs[block], lanes[block], facts[block]
         _spans(numbers[pair], table[pair], pieces[pair], chain, span)
-        power[:] = 0.0
+        for row in range(size * size):
+            for lane in range(LANES):
+                power[row, lane] = 0.0
         for lane in range(LANES):
             loop_rows(outputs[pair], own, lane, n, others, delay, rows)
             loop_matrix(chain, own, lane, n, others, delay, rows, matrix)
@@ -87,7 +89,9 @@ def _weigh_blocks(
                 for j in range(m):
                     power[i * size + j, lane] = matrix[i, j]
             known[lane, WINDOW] = 0.0
-        own[first:] = 0.0
+        for row in range(first, own.shape[0]):
+            for lane in range(LANES):
+                own[row, lane] = 0.0
         for squaring in range(1, _SQUARINGS + 1):
             square(power, work[1], work[2], size)
             missing = 0
@@ -107,6 +111,7 @@ def _weigh_blocks(
 @compiled(cache=False)
 def _spans(numbers: NDArray[Any], table: NDArray[Any], count: int, chain: NDArray[Any], span: NDArray[Any]) -> None:
     """The chain from the coefficients, and the most that y has of each state and input anywhere in the period."""
+    apart()
     n = chain.shape[1]
     for i in range(3):
         for j in range(n):
@@ -123,6 +128,7 @@ def _keep(
     lanes: NDArray[Any], facts: NDArray[Any], weights: NDArray[Any], lane: int, states: int, first: int, window: float
 ) -> None:
     """Weights of the states go to the lane's rows, those of the delayed inputs are added up."""
+    apart()
     facts[WINDOW], facts[LINE], facts[LINE_PULL] = window, 0.0, 0.0
     for j in range(states):
         lanes[first + j, lane] = weights[0, j]
@@ -141,12 +147,13 @@ def advancer(states: int, others: int) -> Any:
     def run(
         numbers: NDArray[Any], edges: NDArray[Any], table: NDArray[Any], pieces: NDArray[Any], pairs: NDArray[Any],
         first: NDArray[Any], delay: int, wanted: NDArray[Any], bands: NDArray[Any], lanes: NDArray[Any],
-        facts: NDArray[Any], begin: NDArray[Any], found: NDArray[Any],
+        facts: NDArray[Any], begin: NDArray[Any], found: NDArray[Any], stretches: int,
     ) -> None:  # fmt: skip
         if checksum:  # always true, see kernels.entries
             _advance(
-                code, numbers, edges, table, pieces, pairs, first, delay, wanted, bands, lanes, facts, begin, found
-            )
+                code, numbers, edges, table, pieces, pairs, first, delay, wanted, bands, lanes, facts, begin, found,
+                stretches,
+            )  # fmt: skip
 
     return run
 
@@ -155,9 +162,9 @@ def advancer(states: int, others: int) -> Any:
 def _advance(
     code: int, numbers: NDArray[Any], edges: NDArray[Any], table: NDArray[Any], pieces: NDArray[Any],
     pairs: NDArray[Any], first: NDArray[Any], delay: int, wanted: NDArray[Any], bands: NDArray[Any],
-    lanes: NDArray[Any], facts: NDArray[Any], begin: NDArray[Any], found: NDArray[Any],
+    lanes: NDArray[Any], facts: NDArray[Any], begin: NDArray[Any], found: NDArray[Any], stretches: int,
 ) -> None:  # fmt: skip
-    """Step every block until facts[..., DONE] is 1 in every lane, or until no more stretches fit.
+    """Step every block until facts[..., DONE] is 1 in every lane, or so many stretches.
 
     first : (B,) sample to begin at; begin : (B, states + 1, LANES) deviations there, the last row what the line of
     delayed inputs holds; found : (B, LANES, columns), see kernels.watching. Lanes that are DONE already, and those
@@ -167,7 +174,7 @@ def _advance(
     states = code // MOST_STATES + code % MOST_STATES
     stride = states + STEP_ROWS
     history, inputs = np.zeros(((_STRETCH + 1) * stride, LANES)), np.zeros((delay + _STRETCH + 2, LANES))
-    past, searches = np.zeros((3 * _STRETCHES, LANES)), np.zeros((ROOM, DEGREE + 3))
+    past, searches = np.zeros((3 * stretches, LANES)), np.zeros((ROOM, DEGREE + 3))
     values = np.zeros((3, max(DEGREE + 1, table.shape[3])))
     for block in range(pairs.shape[0]):
         pair, own, known = pairs[block], lanes[block], facts[block]
@@ -175,7 +182,7 @@ def _advance(
             _copy(history, row, begin[block], row)
         for row in range(inputs.shape[0]):
             _copy(inputs, row, begin[block], states)
-        for stretch in range(_STRETCHES):
+        for stretch in range(stretches):
             for row in range(WATCHED):
                 history[states + row] = -np.inf if row != TROUGH else np.inf
             for k in range(_STRETCH):
@@ -224,6 +231,7 @@ def _over(
     bands: NDArray[Any], facts: NDArray[Any], found: NDArray[Any],
 ) -> bool:  # fmt: skip
     """Whether the bound on everything after this stretch rules out any change of what was found."""
+    apart()
     last = _STRETCH * (states + STEP_ROWS) + states
     past[3 * stretch, lane] = history[last + WEIGHT, lane]
     past[3 * stretch + 1, lane] = history[last + PULL, lane]

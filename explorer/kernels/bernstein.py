@@ -22,6 +22,8 @@ ROOM = 64  # rows of work space: one per halving, and 2**-45 is the narrowest
 _NARROW = 2.0**-45
 _NOISE = 4e-16  # of the largest coefficient: what rounding alone does
 _ROUNDS = 100
+_HALVINGS = 45
+_NEWTON = 12  # the value at a peak is right to the square of the place
 _CLOSE = 1e-9  # two guesses so close: the error falls faster than linearly, so the last one is far better
 
 
@@ -38,11 +40,56 @@ def from_centred_powers() -> NDArray[np.float64]:
     return matrix
 
 
-def basis_at(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    """(N, DEGREE+1) values of the Bernstein polynomials at x (N,)."""
-    powers = np.arange(DEGREE + 1)
-    counts = np.array([float(comb(DEGREE, k)) for k in powers])
-    return np.asarray(counts * x[:, None] ** powers * (1.0 - x[:, None]) ** (DEGREE - powers))
+def basis_at(x: NDArray[np.float64], degree: int = DEGREE) -> NDArray[np.float64]:
+    """(N, degree+1) values of the Bernstein polynomials at x (N,)."""
+    powers = np.arange(degree + 1)
+    counts = np.array([float(comb(degree, k)) for k in powers])
+    return np.asarray(counts * x[:, None] ** powers * (1.0 - x[:, None]) ** (degree - powers))
+
+
+def largest_magnitudes(
+    curves: NDArray[np.float64], owner: NDArray[np.intp], owners: int
+) -> NDArray[np.float64]:
+    """(owners,) largest magnitude on [0, 1] of each owner's polynomials; curves (N, DEGREE+1), owner (N,). NumPy."""
+    best = np.zeros(owners)
+    curves, owner = np.concatenate([curves, -curves]), np.concatenate([owner, owner])
+    halves = _halving()
+    for _ in range(_HALVINGS):
+        np.maximum.at(best, owner, np.maximum(curves[:, 0], curves[:, DEGREE]))
+        higher = curves.max(axis=1) > best[owner] + _NOISE * np.abs(curves).max(axis=1)
+        curves, owner = curves[higher], owner[higher]
+        signs = np.sign(np.diff(curves))
+        for i in range(1, DEGREE):
+            signs[:, i] = np.where(signs[:, i] == 0, signs[:, i - 1], signs[:, i])
+        changes = (signs[:, 1:] * signs[:, :-1] < 0).sum(axis=1)
+        peak = (changes == 1) & (signs[:, 0] > 0)
+        np.maximum.at(best, owner[peak], _peaks(curves[peak]))
+        curves, owner = curves[changes > 1], owner[changes > 1]
+        if not len(curves):
+            break
+        curves, owner = np.concatenate([curves @ half for half in halves]), np.concatenate([owner, owner])
+    return best
+
+
+def _halving() -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Two matrices: coefficients times them are those of the left and of the right half."""
+    left = np.array([[comb(j, i) * 0.5**j for j in range(DEGREE + 1)] for i in range(DEGREE + 1)])
+    return left, left[::-1, ::-1]
+
+
+def _peaks(curves: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Largest value of polynomials that rise first and fall then: Newton's steps on the slope, kept in the bracket."""
+    slope = np.diff(curves)
+    bend = np.diff(slope) * (DEGREE - 1)
+    low, high = np.zeros(len(curves)), np.ones(len(curves))
+    x = np.full(len(curves), 0.5)
+    for _ in range(_NEWTON):
+        rise = (slope * basis_at(x, DEGREE - 1)).sum(axis=1)
+        low, high = np.where(rise > 0, x, low), np.where(rise > 0, high, x)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            following = x - rise / (bend * basis_at(x, DEGREE - 2)).sum(axis=1)
+        x = np.where((following > low) & (following < high), following, 0.5 * (low + high))
+    return np.asarray((curves * basis_at(x)).sum(axis=1))
 
 
 @compiled(cache=False)

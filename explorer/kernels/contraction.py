@@ -56,10 +56,11 @@ def square(power: NDArray[Any], turned: NDArray[Any], result: NDArray[Any], size
 
 
 @compiled(cache=False)
-def _add(target: NDArray[Any], row: int, factor: float, source: NDArray[Any]) -> None:
-    """target[row] += factor * source; a loop, since array assignments cost numba seconds to compile."""
-    for j in range(source.shape[0]):
-        target[row, j] += factor * source[j]
+def _add(target: NDArray[Any], row: int, factor: float, source: NDArray[Any], own: int) -> None:
+    """target[row] += factor * source[own]; a loop, since array assignments cost numba seconds to compile."""
+    apart()
+    for j in range(source.shape[1]):
+        target[row, j] += factor * source[own, j]
 
 
 @compiled(cache=False)
@@ -71,7 +72,10 @@ def loop_rows(
 
     lanes : see kernels.stepping.lane_rows.
     """
-    rows[:] = 0.0
+    apart()
+    for i in range(rows.shape[0]):
+        for j in range(rows.shape[1]):
+            rows[i, j] = 0.0
     own, last = 4 * others, states + others + delay - 1
     direct, scale = lanes[own, lane], lanes[own + 1, lane]
     for j in range(states):
@@ -86,10 +90,10 @@ def loop_rows(
         if delay > 1:
             rows[3, last - 1] = 1.0
         else:
-            _add(rows, 3, 1.0, rows[0])
+            _add(rows, 3, 1.0, rows, 0)
     else:
-        _add(rows, 2, 1.0, rows[0])
-        _add(rows, 1, -outputs[0, states], rows[0])
+        _add(rows, 2, 1.0, rows, 0)
+        _add(rows, 1, -outputs[0, states], rows, 0)
 
 
 @compiled(cache=False)
@@ -98,13 +102,16 @@ def loop_matrix(
     matrix: NDArray[Any],
 ) -> None:  # fmt: skip
     """matrix (m, m) = A - I."""
-    matrix[:] = 0.0
+    apart()
+    for i in range(matrix.shape[0]):
+        for j in range(matrix.shape[1]):
+            matrix[i, j] = 0.0
     for j in range(states):
         matrix[j, j] += chain[0, j]
         if j > 0:
             matrix[j, j - 1] += chain[1, j]
         else:
-            _add(matrix, 0, chain[1, 0], rows[2])
+            _add(matrix, 0, chain[1, 0], rows, 2)
         if j + 1 < states:
             matrix[j, j + 1] += chain[2, j]
     for j in range(others):
@@ -113,14 +120,14 @@ def loop_matrix(
         if j > 0:
             matrix[at, at - 1] += lanes[others + j, lane]
         else:
-            _add(matrix, at, lanes[others, lane], rows[1])
+            _add(matrix, at, lanes[others, lane], rows, 1)
         if j + 1 < others:
             matrix[at, at + 1] += lanes[2 * others + j, lane]
     for j in range(delay):
         at = states + others + j
         matrix[at, at] -= 1.0
         if j == 0:
-            _add(matrix, at, 1.0, rows[0])
+            _add(matrix, at, 1.0, rows, 0)
         else:
             matrix[at, at - 1] += 1.0
 

@@ -53,16 +53,24 @@ _REPORTED = 1e-9
 _SHARE = 1e-10  # of a largest value: what may be missed of it
 _GONE = 1e13  # |y| beyond so many final values: the final value is 0 but for rounding
 _AT_ONCE = 1024  # blocks, to bound memory
+_STRETCHES = 256  # that are stepped
+_MOST_NODES = 2_000_000  # stretches that are looked at when jumping
 
 
 class Plants(NamedTuple):
-    """M pairs of scenario and period. numbers : (M, K) see stepping.plant_numbers; outputs, edges, table, begun : as in
-    chains.describe; pieces : (M,) their number, 0 where none describe the period; load_from : (M,) first sample after a
-    load step's first effect; load_most : (M,) largest |y| before it; period : (M,) [s].
+    """M pairs of scenario and period.
+
+    numbers : (M, 3n + 4(n+2) + 3) see stepping.plant_numbers. outputs : (M, 4, n+2) over (states, held input before,
+    after its change): y at the sample as MEASURED by the sensor, SAMPLED itself, ENDING just before the next sample,
+    SPREAD the most by which y leaves the straight line between these two. drift : (M, n+2) see periods.drifts.
+    edges : (M, pieces + 1) ends of the pieces in periods; table : (M, pieces, DEGREE+1, n+2) their Bernstein
+    coefficients; pieces : (M,) their number, 0 where none describe the period. begun : (M, n) states at load_from,
+    (M,) the first sample after a load step's first effect; load_most : (M,) largest |y| before it; period : (M,) [s].
     """
 
     numbers: Real
     outputs: Real
+    drift: Real
     edges: Real
     table: Real
     pieces: NDArray[np.int64]
@@ -205,12 +213,12 @@ class Blocks:
         shared = self._plants("edges", "table", "pieces")
         advancer(self.states, self.others)(
             self.plants.numbers, *shared, self.pairs, first, self.delay, wanted, bands, self.lanes, self.facts,
-            self.begin, found,
+            self.begin, found, _STRETCHES,
         )  # fmt: skip
         if (self.facts[..., DONE] == 0.0).any():
             pursuer()(
-                self.plants.numbers, self.plants.outputs, *shared, self.pairs, first, self.others, self.delay, wanted,
-                bands, self.lanes, self.facts, self.begin, found,
+                *self._plants("numbers", "outputs", "drift"), *shared, self.pairs, first, self.others, self.delay,
+                wanted, bands, self.lanes, self.facts, self.begin, found, _MOST_NODES,
             )  # fmt: skip
 
 

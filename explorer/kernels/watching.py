@@ -68,6 +68,7 @@ def due(
     found: NDArray[Any],
 ) -> bool:  # fmt: skip
     """Whether a stretch that ends at sample `end`, bounds in rows from `last` on, leaves anything to `watch`."""
+    apart()
     crest, trough = history[last + CREST, lane], history[last + TROUGH, lane]
     found[SEEN] = max(found[SEEN], history[last + TOP, lane])
     found[USED] = max(found[USED], history[last + EFFORT, lane])

@@ -13,11 +13,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from explorer.kernels.bernstein import DEGREE
-from explorer.kernels.chains import MOST_PIECES
-from explorer.kernels.periods import pair_describer
+from explorer.kernels.periods import describe_pairs, drifts
 from explorer.kernels.response import SETTLING, UNDECIDED, Compensators, Plants, respond
 from explorer.kernels.roots import polynomial_roots
-from explorer.kernels.stepping import MOST_STATES, plant_numbers
+from explorer.kernels.stepping import MOST_STATES
 from explorer.loop.closing import Group, Sampled
 from explorer.loop.compensator import Compensator
 from explorer.loop.plant import Realisation, in_series, realise_transfer
@@ -27,7 +26,6 @@ from explorer.study.model import Study
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
-_USUAL_PIECES = 4  # per period; more are tried where these are not enough
 _PAIRS_AT_ONCE = 1024  # to bound memory
 
 
@@ -98,37 +96,23 @@ def plants_of(source: Source, group: Group) -> Plants:
     """The pairs of a group as kernels.response takes them."""
     if source.whole is None:
         return _plants_in_z(source, group)
-    capacity = _USUAL_PIECES
-    plants = _described(source, group, capacity)
-    if (plants.pieces == 0).any():
-        plants = _described(source, group, MOST_PIECES)
-    return plants
-
-
-def _room_for(pairs: int, states: int, capacity: int) -> dict[str, Any]:
-    return {
-        "numbers": np.zeros((pairs, plant_numbers(states))),
-        "outputs": np.zeros((pairs, 4, states + 2)),
-        "edges": np.zeros((pairs, capacity + 1)),
-        "table": np.zeros((pairs, capacity, DEGREE + 1, states + 2)),
-        "pieces": np.zeros(pairs, np.int64),
-        "begun": np.zeros((pairs, states)),
-        "load_from": np.zeros(pairs, np.int64),
-        "load_most": np.zeros(pairs),
-    }
-
-
-def _described(source: Source, group: Group, capacity: int) -> Plants:
-    whole = source.whole
-    assert whole is not None
-    period = source.sampled.period[group.rows, group.columns]
-    room = _room_for(len(period), whole.order, capacity)
+    whole, rows = source.whole, group.rows
+    period = source.sampled.period[rows, group.columns]
+    augmented = np.zeros((whole.order + 1, whole.order + 1, len(rows)), complex)
+    augmented[1:, 0], augmented[1:, 1:] = whole.start[rows].T, np.moveaxis(whole.state[rows], 0, -1)
     measured = np.concatenate([whole.direct[:, None].astype(complex), whole.output], axis=1)
-    pair_describer()(
-        whole.state, whole.start, measured, np.ascontiguousarray(source.seen), group.rows, period,
-        source.advance[group.rows, group.columns], source.load_delay[group.rows], group.delay, *room.values(),
+    described = describe_pairs(
+        augmented, measured[rows].T, source.seen[rows].T, period, source.advance[rows, group.columns],
+        source.load_delay[rows],
     )  # fmt: skip
-    return Plants(**room, period=period)
+    return _with_numbers(described, period, group.delay)
+
+
+def _with_numbers(described: dict[str, Any], period: Real, delay: int) -> Plants:
+    pairs = len(period)
+    where = np.eye(3)[[min(delay, 2)] * pairs]  # the input enters at once, after the change, or later
+    parts = (described.pop("chain").reshape(pairs, -1), described["outputs"].reshape(pairs, -1), where)
+    return Plants(np.concatenate(parts, axis=1), **described, period=period)
 
 
 def _plants_in_z(source: Source, group: Group) -> Plants:
@@ -140,17 +124,16 @@ def _plants_in_z(source: Source, group: Group) -> Plants:
     chain, given, direct = chains_of(numerator[None], denominator)
     period = source.sampled.period[group.rows, group.columns]
     pairs, states = given.shape[1:]
-    room = _room_for(pairs, states, 1)
     row = np.concatenate([given[0], direct[0][:, None], np.zeros((pairs, 1))], axis=1)
-    room["outputs"][:, :3] = row[:, None]
-    room["edges"][:, 1] = 1.0
-    room["table"][:, 0] = row[:, None]
-    room["pieces"][:] = 1
-    room["load_from"][:] = np.rint(source.load_delay[group.rows] / period)
-    room["numbers"][:] = np.concatenate(
-        [chain.reshape(pairs, -1), room["outputs"].reshape(pairs, -1), np.eye(3)[[min(group.delay, 2)] * pairs]], axis=1
-    )
-    return Plants(**room, period=period)
+    outputs, table = np.zeros((pairs, 4, states + 2)), np.zeros((pairs, 1, DEGREE + 1, states + 2))
+    outputs[:, :3], table[:, 0] = row[:, None], row[:, None]
+    edges, pieces = np.tile([0.0, 1.0], (pairs, 1)), np.ones(pairs, np.int64)
+    described = {
+        "chain": chain, "outputs": outputs, "edges": edges, "table": table, "pieces": pieces,
+        "drift": drifts(chain, outputs, edges, table, pieces), "begun": np.zeros((pairs, states)),
+        "load_from": np.rint(source.load_delay[group.rows] / period).astype(np.int64), "load_most": np.zeros(pairs),
+    }  # fmt: skip
+    return _with_numbers(described, period, group.delay)
 
 
 def compensator_chains(compensator: Compensator, gain: Real, columns: NDArray[np.intp]) -> Compensators:
