@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from small_study import study_of
 
-from explorer.sweeping.scenarios import MOST_CORNERS, scenarios_of
+from explorer.sweeping.scenarios import MOST_CORNERS, scenarios_of, scrambled_halton
 
 THREE = """
 strength = { nominal = 0.9, tolerance = "10 %" }
@@ -147,3 +147,11 @@ def test_more_than_ten_varying_parameters_have_a_stated_subset_of_corners(count)
             assert tuple(sign if k == lone else -sign for k in range(count)) in kept
     again = table(parameters, f"1/(s + {' + '.join(names)})", interior=0, scales="[1.0]", seed=9)
     assert (again.values == found.values).all()
+
+
+@pytest.mark.parametrize(("dimensions", "points", "seed"), [(1, 9, 0), (3, 100, 7), (12, 40, 2**31)])
+def test_interior_points_are_those_of_the_reference_library(dimensions, points, seed):
+    from scipy.stats import qmc
+
+    reference = qmc.Halton(dimensions, scramble=True, rng=seed).random(points)
+    np.testing.assert_array_equal(scrambled_halton(dimensions, points, seed), reference)

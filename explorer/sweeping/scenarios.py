@@ -8,11 +8,11 @@ tolerances: every one of them is crossed with every row and belongs to every sca
 from __future__ import annotations
 
 import itertools
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import qmc
 
 from explorer.study.model import Parameter, Study
 
@@ -115,5 +115,34 @@ def _interior(study: Study, count: int) -> Real:
     """Points in [-1, 1]^count."""
     if study.scenarios.interior == 0 or count == 0:
         return np.zeros((0, count))
-    points = qmc.Halton(count, scramble=True, rng=study.scenarios.seed).random(study.scenarios.interior)
-    return np.asarray(2.0 * points - 1.0)
+    return 2.0 * scrambled_halton(count, study.scenarios.interior, study.scenarios.seed) - 1.0
+
+
+def scrambled_halton(dimensions: int, points: int, seed: int) -> Real:
+    """Points of [0, 1)^dimensions, (points, dimensions): digits of the index in a prime base each, permuted at random.
+
+    Source: Owen (2017), A randomized Halton algorithm in R, arXiv 1706.02808. The numbers of scipy.stats.qmc.Halton, bit
+    for bit, without the second that loading scipy.stats takes in every command.
+    """
+    (generator,), result = np.random.default_rng(seed).spawn(1), np.zeros((points, dimensions))
+    for column, base in enumerate(_primes(dimensions)):
+        digits = math.ceil(54 / math.log2(base)) - 1  # those that a double can tell
+        permutations = np.repeat(np.arange(base)[None], digits, axis=0)
+        for permutation in permutations:
+            generator.shuffle(permutation)
+        rest, place = np.arange(points), 1.0
+        for permutation in permutations:
+            place /= base
+            result[:, column] += permutation[rest % base] * place
+            rest //= base
+    return result
+
+
+def _primes(count: int) -> list[int]:
+    found: list[int] = []
+    number = 2
+    while len(found) < count:
+        if all(number % prime for prime in found):
+            found.append(number)
+        number += 1
+    return found
