@@ -121,8 +121,8 @@ def _interior(study: Study, count: int) -> Real:
 def scrambled_halton(dimensions: int, points: int, seed: int) -> Real:
     """Points of [0, 1)^dimensions, (points, dimensions): digits of the index in a prime base each, permuted at random.
 
-    Source: Owen (2017), A randomized Halton algorithm in R, arXiv 1706.02808. The numbers of scipy.stats.qmc.Halton, bit
-    for bit, without the second that loading scipy.stats takes in every command.
+    Source: Owen (2017), A randomized Halton algorithm in R, arXiv 1706.02808. The numbers are those of
+    scipy.stats.qmc.Halton, bit for bit, without the second that loading scipy.stats takes in every command.
     """
     (generator,), result = np.random.default_rng(seed).spawn(1), np.zeros((points, dimensions))
     for column, base in enumerate(_primes(dimensions)):
