@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import json
 import re
 from collections.abc import Mapping
@@ -9,6 +10,7 @@ from pathlib import Path
 from typing import Any, NamedTuple
 
 import xarray
+from matplotlib.figure import Figure
 
 from explorer.errors import OptionError, RunError
 from explorer.names import GAIN, PERIOD, SCALE, SWEEP, VERDICT
@@ -44,9 +46,16 @@ def write_answer(folder: Path, sweep: xarray.Dataset, limits: Mapping[str, str] 
     decision = decide(sweep, verdict)
     write_dataset(verdict, folder / VERDICT_FILE)
     write_whole(folder / DECISION_FILE, as_json(decision).encode())
-    save(region_map(verdict, decision), folder / REGION_FILE)
-    save(slack_sheet(verdict, decision=decision), folder / SLACK_FILE)
+    _put(region_map(verdict, decision), folder / REGION_FILE)
+    _put(slack_sheet(verdict, decision=decision), folder / SLACK_FILE)
     return Run(verdict, decision)
+
+
+def _put(figure: Figure, path: Path) -> None:
+    """Save a picture and give its memory back: that of a large grid is as much as the run itself."""
+    save(figure, path)
+    figure.clear()
+    gc.collect()
 
 
 def draw(
