@@ -55,6 +55,7 @@ def weigher() -> Any:
 
     @compiled(cache=True)
     def run(*arguments: Any) -> None:
+        """See `_weigh_blocks`."""
         if checksum:  # always true
             _weigh_blocks(*arguments)
 
@@ -149,6 +150,7 @@ def advancer(states: int, others: int) -> Any:
         first: NDArray[Any], delay: int, wanted: NDArray[Any], bands: NDArray[Any], lanes: NDArray[Any],
         facts: NDArray[Any], begin: NDArray[Any], found: NDArray[Any], stretches: int,
     ) -> None:  # fmt: skip
+        """See `_advance`."""
         if checksum:  # always true, see kernels.entries
             _advance(
                 code, numbers, edges, table, pieces, pairs, first, delay, wanted, bands, lanes, facts, begin, found,

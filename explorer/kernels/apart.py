@@ -12,6 +12,7 @@ def _mark(typingctx: Any) -> Any:
     """Called first in a compiled function: it stays a function of its own, optimised once."""
 
     def codegen(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        """Mark the function that is being built."""
         builder.function.attributes.add("noinline")
         return context.get_dummy_value()
 

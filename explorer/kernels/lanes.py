@@ -200,11 +200,13 @@ def emitted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> Any:
 
     @_intrinsic
     def run(typingctx: Any, degree: Any, arguments: Any) -> Any:
+        """The intrinsic, typed for one degree."""
         if not isinstance(degree, types.IntegerLiteral):
             raise RequireLiteralValue("degree")
         count = degree.literal_value
 
         def codegen(context: Any, builder: ir.IRBuilder, sig: Any, args: Any) -> Any:
+            """Load the rows, run the formula over symbols, store its results."""
             items = [builder.extract_value(args[1], k) for k in range(len(sig.args[1]))]
             kinds = list(sig.args[1])
             rows = []
@@ -229,6 +231,7 @@ def _interpreted(formula: Formula, inputs: Callable[[int], tuple[int, ...]]) -> 
     """The same function without a compiler, over NumPy arrays."""
 
     def run(degree: int, arguments: tuple[Any, ...]) -> int:
+        """The formula over rows of NumPy arrays."""
         *sources, target, row, apart = arguments
         rows: list[Any] = []
         for array, first, size in zip(sources[::2], sources[1::2], inputs(degree), strict=True):

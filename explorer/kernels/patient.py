@@ -56,6 +56,7 @@ def pursuer() -> Any:
 
     @compiled(cache=True)
     def run(*arguments: Any) -> None:
+        """See `_pursue_lanes`."""
         if checksum:  # always true
             _pursue_lanes(*arguments)
 

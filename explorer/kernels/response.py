@@ -244,6 +244,7 @@ def beginner() -> Any:
 
     @compiled(cache=True)
     def run(*arguments: Any) -> None:
+        """See `_begin_blocks`."""
         if checksum:  # always true
             _begin_blocks(*arguments)
 

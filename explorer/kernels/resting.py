@@ -100,6 +100,7 @@ def ramp_follower() -> Any:
 
     @compiled(cache=True)
     def run(*arguments: Any) -> None:
+        """See `_ramp_errors`."""
         if checksum:  # always true
             _ramp_errors(*arguments)
 

@@ -8,8 +8,6 @@ what still does not is marked for the companion eigenvalues of kernels.roots, ne
 from __future__ import annotations
 
 import functools
-import zlib
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -17,12 +15,14 @@ from numba import literally
 from numpy.typing import NDArray
 
 from explorer.kernels.compiling import compiled
+from explorer.kernels.entries import sources
 from explorer.kernels.factors import IN_Z, advanced, reduced, repeated
 from explorer.kernels.lanes import LANES, emitted
 from explorer.kernels.restart import forget, pair_again, solve_afresh
 
 REDUCTIONS = 6  # rows of factors.reduced
 _MOST_ROUNDS = 6
+_WITHIN = ("compiling", "factors", "lanes", "resolution", "restart", "tracking")  # files in a tracker's machine code
 
 _advance = emitted(advanced, lambda degree: (-5, degree + 1, degree + 1, 4 * degree))
 _repeat = emitted(repeated, lambda degree: (-1, degree + 1, degree + 1, degree + 1))
@@ -38,7 +38,7 @@ def tracker(degree: int, in_z: bool = False) -> Any:
     Each degree has instructions of its own, compiled when first called and kept in numba's cache on disk. The
     cache knows a kernel by this file and by what it closes over: `sources` brings the formulas' files in.
     """
-    sources, code = _sources(), degree + (IN_Z if in_z else 0)
+    checksum, code = sources(*_WITHIN), degree + (IN_Z if in_z else 0)
 
     @compiled(cache=True)
     def run(
@@ -47,19 +47,11 @@ def tracker(degree: int, in_z: bool = False) -> Any:
         steps: NDArray[Any],
         reductions: NDArray[Any],
     ) -> None:
-        if sources:  # always true; see above
+        """See `_track`."""
+        if checksum:  # always true; see above
             _track(degree, code, constant, slope, steps, reductions)
 
     return run
-
-
-@functools.cache
-def _sources() -> int:
-    """A checksum of the sources that end up in the machine code of a tracker, never 0."""
-    folder = Path(__file__).parent
-    names = ("compiling", "factors", "lanes", "resolution", "restart")
-    texts = [(folder / f"{name}.py").read_bytes() for name in names]
-    return zlib.crc32(b"".join(texts)) + 1
 
 
 @compiled(cache=False)  # its callers are cached, with it inside

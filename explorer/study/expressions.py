@@ -148,6 +148,7 @@ class _Parser:
             )
 
     def whole(self) -> Node:
+        """The expression, to the end of the text."""
         node = self.sum()
         if self.position < len(self.tokens):
             kind, text, column = self.tokens[self.position]
@@ -156,6 +157,7 @@ class _Parser:
         return node
 
     def sum(self) -> Node:
+        """Terms with + and - between them."""
         node = self.product()
         while self.ahead() in ("+", "-"):
             sign, column = self.take()
@@ -163,6 +165,7 @@ class _Parser:
         return node
 
     def product(self) -> Node:
+        """Factors with * and / between them."""
         node = self.signed()
         while self.ahead() in ("*", "/"):
             sign, column = self.take()
@@ -170,6 +173,7 @@ class _Parser:
         return node
 
     def signed(self) -> Node:
+        """A power, with a sign before it or none."""
         self.descend()
         if self.ahead() in ("+", "-"):
             sign, column = self.take()
@@ -181,6 +185,7 @@ class _Parser:
         return node
 
     def power(self) -> Node:
+        """An atom, raised or not."""
         base = self.atom()
         if self.ahead() in ("**", "^"):
             _, column = self.take()
@@ -190,6 +195,7 @@ class _Parser:
         return base
 
     def atom(self) -> Node:
+        """A number, a name, a call or a parenthesis."""
         if self.position >= len(self.tokens):
             raise ExpressionError(self.end, "the expression ends where a number, name or ( is expected")
         kind, text, column = self.tokens[self.position]
@@ -206,11 +212,13 @@ class _Parser:
         raise ExpressionError(column, f"{text!r} stands where a number, name or ( is expected")
 
     def name(self, text: str, column: int) -> Node:
+        """A name, or the call of a known function."""
         if text in FUNCTIONS:
             raise ExpressionError(column, f"{text} needs its argument in parentheses: {text}(...)")
         return Name(text.replace("\u00b5", "\u03bc"), column)
 
     def call(self, text: str, column: int) -> Node:
+        """A function and its argument."""
         if text not in FUNCTIONS:
             hint = closest(text, FUNCTIONS) or f"To multiply write {text}*(...)."
             raise ExpressionError(
@@ -220,6 +228,7 @@ class _Parser:
         return Call(text, self.parenthesis(opening), column)
 
     def parenthesis(self, opening: int) -> Node:
+        """What stands between ( and )."""
         self.descend()
         node = self.sum()
         if self.position >= len(self.tokens):
@@ -232,18 +241,21 @@ class _Parser:
         return node
 
     def descend(self) -> None:
+        """One level deeper; ExpressionError where that is too deep."""
         self.depth += 1
         if self.depth > 2 * DEEPEST:  # each parenthesis passes one sign level too
             column = self.tokens[min(self.position, len(self.tokens) - 1)][2]
             raise ExpressionError(column, f"nested deeper than {DEEPEST} levels")
 
     def ahead(self) -> str:
+        """The next sign without taking it."""
         if self.position >= len(self.tokens):
             return ""
         kind, text, _ = self.tokens[self.position]
         return text if kind == "sign" else ""
 
     def take(self) -> tuple[str, int]:
+        """The next sign, taken."""
         _, text, column = self.tokens[self.position]
         self.position += 1
         return text, column

@@ -201,11 +201,13 @@ class _Unit:
     exponents: tuple[int, ...] = (0,) * len(_BASE + _COUNTED)
 
     def times(self, other: _Unit, power: int = 1) -> _Unit:
+        """The product with a power of another unit."""
         exponents = tuple(a + power * b for a, b in zip(self.exponents, other.exponents, strict=True))
         return _Unit(self.scale * other.scale**power, self.pi + power * other.pi, exponents)
 
     @property
     def dimension(self) -> Dimension:
+        """The exponents of the SI base units."""
         return Dimension(tuple(Fraction(exponent) for exponent in self.exponents[: len(_BASE)]))
 
     @property

@@ -141,6 +141,7 @@ class _Evaluation:
     axes: int
 
     def of(self, node: Node) -> Rational:
+        """The value of a part of the tree."""
         if isinstance(node, Number):
             return Rational(np.full((1,) * self.axes, node.value))
         if isinstance(node, Name):

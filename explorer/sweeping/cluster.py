@@ -102,6 +102,7 @@ def _finished(distributed: Any, client: Any, study: Study, tiles: list[Tile]) ->
     running: dict[Any, Tile] = {}
 
     def hand_out() -> list[Any]:
+        """Futures of further tiles, as many as keep the workers busy."""
         threads = max(1, sum(client.nthreads().values()))
         fresh = []
         while waiting and len(running) < _AHEAD * threads:

@@ -52,6 +52,7 @@ class Grid:
         sizes = tuple(len(axis.values) for axis in study.design)
 
         def shaped(array: NDArray[Any], lead: int) -> NDArray[Any]:
+            """The axis of designs unfolded into one axis per design variable."""
             return array.reshape(*array.shape[:lead], *sizes, *array.shape[lead + 1 :])
 
         arrays = {

@@ -128,6 +128,7 @@ def _at_point(study: Study, at: Place) -> tuple[Study, dict[str, float]]:
         raise OptionError("\n".join(f"at: {problem}" for problem in problems))
 
     def only(axis: Axis) -> Axis:
+        """The axis cut down to its one value."""
         return dataclasses.replace(axis, values=np.array([values[axis.name]]))
 
     design = tuple(only(axis) for axis in study.design)
@@ -243,6 +244,7 @@ def _at(polynomial: Real, w: NDArray[np.complex128]) -> NDArray[np.complex128]:
 
 def _coordinates(study: Study, asked: int, scenarios: Scenarios, time: Real) -> dict[str, Any]:
     def words(items: Any) -> NDArray[Any]:
+        """Texts as an array."""
         return np.array(list(items), dtype=object)
 
     own, others = study.requirements[:asked], study.requirements[asked:]

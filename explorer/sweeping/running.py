@@ -135,6 +135,7 @@ def _computed(
     alike = loops_by_delay(study, scenarios)
 
     def solve(tile: Tile) -> tuple[Tile, TileResult]:
+        """One tile and its result."""
         return tile, compute(study, scenarios, tile, alike)
 
     if jobs == 1:

@@ -107,6 +107,7 @@ class _Planes:
         return array.reshape(array.shape[0], -1, *array.shape[-2:])
 
     def holds_somewhere(self) -> bool:
+        """Whether any point is feasible."""
         return bool((self.least >= 0).any())
 
     def slowest(self) -> Decision | None:

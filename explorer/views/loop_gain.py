@@ -165,6 +165,7 @@ def _margin_words(probed: Probed, row: Row) -> str:
     """ "gain margin 12 dB; worst 9 dB, plant 7", in the unit of the axis."""
 
     def words(value: float) -> str:
+        """The margin as people read it."""
         known = 0 < value < math.inf
         return f"{20 * math.log10(value):.3g} dB" if known and row.kind == "gain margin" else row.words(value)
 
